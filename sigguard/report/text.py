@@ -1,0 +1,24 @@
+"""The report as one plain line, for the terminal."""
+
+from __future__ import annotations
+
+from sigguard.report.document import Report
+from sigguard.report.page import measurable_words
+from sigguard.report.words import PATTERN_WORDS, VERDICT_WORDS, plain, stretch
+
+
+def one_line(report: Report) -> str:
+    """``NAME: verdict; what can be trusted; the first advice``, led by PATIENT FIRST where somebody must look.
+
+    Without line ends and control characters, whatever the header holds.
+    """
+    parts = [VERDICT_WORDS[report.verdict].lower(), f"can be trusted: {measurable_words(report)}"]
+    if report.advice:
+        parts.append(min(report.advice, key=lambda a: a.rank).text.rstrip("."))
+    line = f"{report.info.name}: {'; '.join(parts)}"
+    if report.patient_first:
+        alarm = report.patient_first[0]
+        more = len(report.patient_first) - 1
+        what = f"{PATTERN_WORDS.get(alarm.pattern, alarm.pattern)} {stretch(alarm.start_s, alarm.end_s)}"
+        line = f"PATIENT FIRST: {what}{f' and {more} more' if more else ''} | {line}"
+    return plain(line)

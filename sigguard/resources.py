@@ -1,0 +1,38 @@
+"""Where the files that ship with the package are: beside a checkout, or inside an installed wheel."""
+
+from __future__ import annotations
+
+from importlib.resources import files
+from pathlib import Path
+
+from sigguard.errors import UsageError
+
+KINDS = ("models", "synthetic")
+
+
+def resource_path(kind: str, name: str) -> Path:
+    """Path of a shipped file: kind "models" or "synthetic", name as in the folder.
+
+    In an installed package the folders are ``sigguard/_models`` and ``sigguard/_synthetic``; in a checkout
+    they lie beside the package. Raises UsageError for an unknown kind, a name that leaves the folder, or a
+    file that is not there.
+    """
+    if kind not in KINDS:
+        raise UsageError(f"kind of shipped file must be one of {', '.join(KINDS)}, found {kind!r}")
+    for folder in _folders(kind):
+        path = folder / name
+        if path.exists() and path.resolve().is_relative_to(folder.resolve()):
+            return path
+    raise UsageError(f"shipped file {kind}/{name} not found; the installation may be incomplete")
+
+
+def _folders(kind: str) -> list[Path]:
+    """Where a kind may lie: the installed package first, then the checkout."""
+    found = []
+    try:
+        installed = files(f"sigguard._{kind}")
+    except ModuleNotFoundError:
+        pass
+    else:
+        found.append(Path(str(installed)))
+    return [*found, Path(str(files("sigguard"))).parent / kind]

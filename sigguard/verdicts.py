@@ -1,0 +1,106 @@
+"""From features to what the table of segments says: scores, bounds, absences, faults."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sigguard.features import FEATURE_NAMES
+from sigguard.measure import Analysis
+from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
+from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS
+
+RATE, PR, QRS, QT, ST = range(len(MEASUREMENTS))
+NO_WAVE, TOO_SMALL_HERE = ABSENT.index("no-wave"), ABSENT.index("too-small-here")
+MIN_CLIPPED_S, MIN_FLAT_S = 0.05, 0.3
+WEAK_UV = 150.0  # QRS peak to peak; 5 mm is the usual lower end (common practice), this is 1.5 mm
+HIGH_PASS_TAKES_ST_HZ = (
+    0.1  # a 0.5 Hz analogue high-pass distorts ST, 0.05 Hz is asked for (Kligfield et al. 2007)
+)
+LOW_PASS_TAKES_QRS_HZ = 30.0
+LOWEST_FS_HZ = {PR: 100.0, QRS: 100.0, QT: 80.0, ST: 80.0}
+
+
+def judge_rows(
+    model: ReliabilityModel, analysis: Analysis, tolerance: NDArray[np.float64]
+) -> tuple[NDArray, NDArray, NDArray, NDArray, NDArray]:
+    """(scores, bounds, reliable, absent, fault probabilities) of the (R,) rows of an analysis.
+
+    A bound that the calibration cannot give is NaN. A named absence stands only where the calibration
+    says that such names hold.
+    """
+    scores, fault_p = model.judge(analysis.features)
+    has = np.isfinite(analysis.value)
+    bound = model.bound(scores)
+    bound = np.where(np.isfinite(bound) & has, bound, np.nan)
+    reliable = model.reliable(scores, tolerance) & has
+    absent = np.where(model.absence_holds(scores) & ~has, analysis.absent, 0).astype(np.int8)
+    return scores, bound, reliable, absent, fault_p
+
+
+def small_here(
+    absent: NDArray[np.int8], reliable: NDArray[np.bool_], value: NDArray[np.float64], n_leads: int
+) -> NDArray[np.int8]:
+    """A wave missing in one lead but measured in another at the same time is too small there, not absent.
+
+    Rows run by time and then lead, (n_times * n_leads, 5).
+    """
+    seen = (reliable & np.isfinite(value)).reshape(-1, n_leads, len(MEASUREMENTS)).any(axis=1)
+    elsewhere = np.repeat(seen, n_leads, axis=0)
+    return np.where((absent == NO_WAVE) & elsewhere, TOO_SMALL_HERE, absent).astype(np.int8)
+
+
+def limit_by_recording(
+    reliable: NDArray[np.bool_],
+    lead_index: NDArray[np.intp],
+    fs_hz: float,
+    band_hz: NDArray[np.float64] | None,
+) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+    """(reliable without what sampling rate or recorded bandwidth take away, rows so limited)."""
+    allowed = np.ones_like(reliable)
+    for column, least in LOWEST_FS_HZ.items():
+        allowed[:, column] &= fs_hz >= least
+    if band_hz is not None:
+        low, high = band_hz[lead_index, 0], band_hz[lead_index, 1]
+        allowed[:, ST] &= ~(low > HIGH_PASS_TAKES_ST_HZ)
+        allowed[:, QRS] &= ~(high < LOW_PASS_TAKES_QRS_HZ)
+    return reliable & allowed, ~allowed.all(axis=1)
+
+
+def fault_rows(
+    model: ReliabilityModel,
+    features: NDArray[np.float32],
+    fault_p: NDArray[np.float64],
+    limited: NDArray[np.bool_],
+    length_s: float,
+) -> NDArray[np.float32]:
+    """(R, 9) fractions of the segment on which each fault lies, in the order of FAULTS; 0 where not called.
+
+    Wander, muscle, mains and motion are called by the classifiers for the segment as a whole; flat,
+    clipped and missing are measured.
+    """
+    out = np.zeros((len(features), len(FAULTS)), dtype=np.float32)
+
+    def column(name: str) -> NDArray[np.float64]:
+        return np.nan_to_num(features[:, FEATURE_NAMES.index(name)].astype(np.float64))
+
+    for k, name in enumerate(LEARNED_FAULTS):
+        out[:, FAULTS.index(name)] = fault_p[:, k] >= model.fault_threshold[k]
+    for name, least in (("flat", MIN_FLAT_S), ("clipped", MIN_CLIPPED_S), ("missing", 1e-9)):
+        seconds = column(f"{name}_s")
+        out[:, FAULTS.index(name)] = np.where(seconds >= least, np.minimum(seconds / length_s, 1.0), 0.0)
+    height = column("qrs_pp_uv")
+    out[:, FAULTS.index("weak")] = (height > 0) & (height < WEAK_UV)
+    out[:, FAULTS.index("narrow-band")] = limited
+    return out
+
+
+def silence_under(
+    reliable: NDArray[np.bool_], start_s: NDArray, end_s: NDArray, alarms: list[tuple[float, float, str]]
+) -> NDArray[np.bool_]:
+    """``reliable`` without the rows a fibrillation or standstill touches: there is nothing to measure."""
+    out = reliable.copy()
+    for first, last, pattern in alarms:
+        if pattern != "wide-fast":
+            out[(start_s < last) & (end_s > first)] = False
+    return out

@@ -1,0 +1,83 @@
+"""Recipes and shipped files are found in a checkout and in an installed package, and checked."""
+
+from __future__ import annotations
+
+import importlib
+import sys
+from pathlib import Path
+
+import pytest
+
+import sigguard
+from sigguard import resources
+from sigguard.errors import UsageError
+from sigguard.resources import resource_path
+from sigguard.simulate import recipes
+from sigguard.simulate.recipes import load_recipe, training_recipe
+from sigguard.simulate.rhythms import RHYTHM_WEIGHTS
+
+
+def test_the_training_recipe_holds_what_the_method_asks():
+    recipe = training_recipe()
+    assert recipe.snr_db == (-6.0, 30.0)
+    assert recipe.duration_s == (5.0, 30.0)
+    assert recipe.rhythms == RHYTHM_WEIGHTS
+    assert set(recipe.disturbances) == set(recipes.DISTURBANCES)
+    assert sum(recipe.rhythms.values()) == pytest.approx(1.0)
+
+
+def test_the_demo_recipe_has_eight_recordings_of_different_names():
+    names = [entry["name"] for entry in load_recipe("demo")["recording"]]
+    assert len(names) == len(set(names)) == 8
+
+
+@pytest.mark.parametrize(
+    ("kind", "name"), [("poems", "x"), ("models", "none.npz"), ("synthetic", "../pyproject.toml")]
+)
+def test_only_shipped_files_are_found(kind, name):
+    with pytest.raises(UsageError):
+        resource_path(kind, name)
+
+
+def test_an_installed_package_comes_first(tmp_path, monkeypatch):
+    installed = tmp_path / "_synthetic"
+    installed.mkdir()
+    (installed / "__init__.py").touch()
+    (installed / "training.toml").write_text("seed = 1\n")
+    try:
+        with monkeypatch.context() as patch:
+            patch.setattr(sigguard, "__path__", [*sigguard.__path__, str(tmp_path)])
+            patch.delitem(sys.modules, "sigguard._synthetic", raising=False)
+            importlib.invalidate_caches()
+            assert Path(resource_path("synthetic", "training.toml")) == installed / "training.toml"
+            assert load_recipe("training") == {"seed": 1}
+            with pytest.raises(UsageError, match="missing or unusable"):
+                training_recipe()
+    finally:
+        sys.modules.pop("sigguard._synthetic", None)
+        sigguard.__dict__.pop("_synthetic", None)
+        importlib.invalidate_caches()
+    assert training_recipe().seed != 1
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "message"),
+    [
+        ("sinus = 0.24", "samba = 0.24", "samba"),
+        ("wander = 0.12", "wander = -1", "negative"),
+        ("[snr_db]", "[snr]", "snr_db"),
+        ("low = -6.0", "low = ", "cannot be read"),
+        ("bursting = 0.25", "jumping = 0.25", "jumping"),
+    ],
+)
+def test_a_broken_recipe_says_what_is_wrong(tmp_path, monkeypatch, old, new, message):
+    text = resource_path("synthetic", "training.toml").read_text(encoding="utf-8")
+    assert old in text
+    (tmp_path / "training.toml").write_text(text.replace(old, new, 1), encoding="utf-8")
+    monkeypatch.setattr(recipes, "resource_path", lambda kind, name: tmp_path / name)
+    with pytest.raises(UsageError, match=message):
+        training_recipe()
+
+
+def test_kinds_of_shipped_files():
+    assert resources.KINDS == ("models", "synthetic")
