@@ -23,6 +23,8 @@ from sigguard.filters import RowTransform, band_pass, high_pass, low_pass
 REFRACTORY_S = 0.2
 MATCH_S = 0.15  # ANSI/AAMI EC57
 QRS_BAND_HZ = (4.0, 25.0)
+STANDS_OUT, LEFT_SHARE = 1.3, 0.75
+SHAPE_COUNTS = (0.2, 3.0)  # how much likeness to the typical complex weighs: at rest, and more with the noise
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -174,14 +176,16 @@ def find_beats(work: RowTransform) -> Beats:
         complexes(qrs_mv, peaks.row[seeds], peaks.at[seeds], int(0.08 * fs_hz)), peaks.row[seeds], len(curve)
     )
     likeness, shift = best_likeness(qrs_mv, peaks.row, peaks.at, shape, int(0.04 * fs_hz))
-    strength = np.minimum(height, 3.0) * (0.5 + 0.5 * np.clip(likeness, 0, 1))
-    sharp = _sharpness(work, peaks)
     between = level_between(curve / level[:, None], peaks.row, peaks.at, height >= 0.6, int(0.12 * fs_hz))
+    # Where it is quiet an odd shape is believed (ectopy); the noisier, the more a beat must look like one.
+    by_shape = np.clip(SHAPE_COUNTS[0] + SHAPE_COUNTS[1] * between, 0.0, 0.7)[peaks.row]
+    strength = np.minimum(height, 3.0) * (1.0 - by_shape * (1.0 - np.clip(likeness, 0, 1)))
+    sharp = _sharpness(work, peaks)
     threshold = np.clip(4.0 * between, 0.28, 0.7)
     keep = separate(peaks, strength, sharp, fs_hz, strength >= threshold[peaks.row])
     keep = search_back(peaks, strength, fs_hz, keep, threshold)
     # A complex that resembles the typical one is timed by it; any other by its own energy.
-    at = peaks.at + np.where(likeness >= 0.7, shift, 0.0)
+    at = peaks.at.astype(np.float64) + np.where(likeness >= 0.7, shift, 0.0)
     margin = strength / threshold[peaks.row]
     weakest, left = np.full(len(curve), 9.0), np.zeros(len(curve))
     np.minimum.at(weakest, peaks.row[keep], margin[keep])
@@ -239,7 +243,10 @@ def separate(
 def search_back(
     peaks: Candidates, strength: NDArray, fs_hz: float, keep: NDArray[np.bool_], threshold: NDArray
 ) -> NDArray[np.bool_]:
-    """In a gap of 1.5 times the usual interval the strongest candidate above half the threshold comes in."""
+    """In a gap of 1.5 times the usual interval the strongest candidate above half the threshold may come in.
+
+    It must stand out from what else was left out, as P waves and fibrillation waves in a pause do not.
+    """
     index = np.flatnonzero(keep)
     out = keep.copy()
     if len(index) < 4:
@@ -250,6 +257,7 @@ def search_back(
     ranked = np.sort(near, axis=1)  # NaN last
     count = np.isfinite(near).sum(axis=1)
     usual = ranked[np.arange(len(near)), np.maximum((count - 1) // 2, 0)]
+    common = _common_left(peaks, strength, keep)
     for i in np.flatnonzero((gap > 1.5 * usual) & (count >= 3)):
         first, last = index[i], index[i + 1]
         between = np.arange(first + 1, last)
@@ -257,10 +265,22 @@ def search_back(
             continue
         late = (peaks.at[between] - peaks.at[first]) / fs_hz > 0.36
         early = (peaks.at[last] - peaks.at[between]) / fs_hz > 0.30
-        fit = between[late & early & (strength[between] > 0.5 * threshold[peaks.row[first]])]
+        least = max(0.5 * threshold[peaks.row[first]], STANDS_OUT * common[peaks.row[first]])
+        fit = between[late & early & (strength[between] > least)]
         if len(fit):
             out[fit[strength[fit].argmax()]] = True
     return out
+
+
+def _common_left(peaks: Candidates, strength: NDArray, keep: NDArray[np.bool_]) -> NDArray[np.float64]:
+    """(R,): the strength that a fifth of the candidates left out reach; 0 where none was left out."""
+    left = np.flatnonzero(~keep)
+    row = peaks.row[left]
+    count = np.bincount(row, minlength=len(peaks.level))
+    order = left[np.lexsort((strength[left], row))]
+    start = np.concatenate([[0], np.cumsum(count)[:-1]])
+    place = np.minimum(start + (LEFT_SHARE * count).astype(np.intp), max(len(order) - 1, 0))
+    return np.where(count > 0, strength[order[place]], 0.0) if len(order) else np.zeros(len(peaks.level))
 
 
 def agreement(

@@ -11,8 +11,6 @@ from collections.abc import Sequence
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import nnls
-from scipy.signal import firwin, oaconvolve
 
 from sigguard.findings import ElectrodeNoise
 
@@ -122,8 +120,35 @@ def _independent_powers(covariance: Floats, centring: Floats) -> Floats:
         return np.zeros(len(centring))
     # column k of the design is the covariance one electrode of unit power makes
     design = (centring[:, None, :] * centring[None, :, :]).reshape(-1, len(centring))
-    power, _ = nnls(design, (covariance / scale).ravel())
-    return power * scale
+    return non_negative_least_squares(design, (covariance / scale).ravel()) * scale
+
+
+def non_negative_least_squares(design: Floats, target: Floats) -> Floats:
+    """x ≥ 0 (n,) with the least |design @ x − target| for a (m, n) design of full rank.
+
+    The active set method of Lawson and Hanson 1974. Written here because its home, scipy.optimize, takes longer
+    to import than a recording takes to check; a test holds the two against each other.
+    """
+    n = design.shape[1]
+    x, free = np.zeros(n), np.zeros(n, dtype=bool)
+    least = 10 * max(design.shape) * np.finfo(np.float64).eps * float(np.abs(design).sum(axis=0).max())
+    for _ in range(3 * n):
+        descent = np.where(free, -np.inf, design.T @ (target - design @ x))
+        if not descent.max() > least:
+            break
+        free[descent.argmax()] = True
+        while True:
+            wanted = np.zeros(n)
+            wanted[free] = np.linalg.lstsq(design[:, free], target, rcond=None)[0]
+            below = free & (wanted <= 0)
+            if not below.any():
+                break
+            step = np.min(x[below] / (x[below] - wanted[below]))
+            x = x + step * (wanted - x)
+            free &= x > least
+            x[~free] = 0.0
+        x = wanted
+    return x
 
 
 def beat_free_residual(x_mv: Floats, fs_hz: float) -> Floats:
@@ -133,6 +158,8 @@ def beat_free_residual(x_mv: Floats, fs_hz: float) -> Floats:
     and where the signal is missing, all NaN for fewer than 2 samples. Meant for when no beat train can be averaged; movement between 0.7
     and 25 Hz, where the ECG itself lies, is not seen.
     """
+    from scipy.signal import firwin  # slow to import, and no check needs it
+
     x = np.asarray(x_mv, dtype=np.float64)
     n = x.shape[1]
     if n < 2:
@@ -150,6 +177,8 @@ def beat_free_residual(x_mv: Floats, fs_hz: float) -> Floats:
 
 def _filtered(x: Floats, taps: Floats) -> Floats:
     """Zero-phase FIR filter with the ends held, rows on their own; shape kept."""
+    from scipy.signal import oaconvolve
+
     half = len(taps) // 2
     return oaconvolve(np.pad(x, ((0, 0), (half, half)), mode="edge"), taps[None], mode="valid", axes=1)
 

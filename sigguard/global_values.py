@@ -67,9 +67,9 @@ def analyse_global(
 
     ``prepared`` may hold what ``measure.prepare`` made of the rows (S·L, N), to save doing it twice.
     """
-    x_mv = np.asarray(x_mv, dtype=np.float64)
     n_strips, n_leads, n = x_mv.shape
-    ready = prepared or prepare(x_mv.reshape(n_strips * n_leads, n), fs_hz)
+    each: NDArray[np.float64] = np.asarray(x_mv, dtype=np.float64).reshape(n_strips * n_leads, n)
+    ready = prepared or prepare(each, fs_hz)
     strip, at, detail = common_beats(ready.work, n_strips, n_leads)
     at, likeness = _align(ready.work, strip, at, n_strips, n_leads)
     rows = (strip[:, None] * n_leads + np.arange(n_leads)).ravel()

@@ -121,7 +121,7 @@ def judge(
 
 def _alarm_reasons(patient_first: Sequence[PatientFirst]) -> list[str]:
     texts = [
-        f"Look at the patient first: {p.text or p.pattern}"
+        p.text or f"Look at the patient first: {p.pattern}"
         if p.text or p.pattern
         else "Look at the patient first."
         for p in patient_first[:_NAMED_AT_MOST]

@@ -8,6 +8,7 @@ half-sample replicates of the average, whose scatter tells how far each mark may
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -35,8 +36,9 @@ __all__ = [
 
 WAVE_BAND_HZ = (0.5, 35.0)  # 0.5 Hz forwards and backwards is within Kligfield et al. 2007 (0.67 Hz)
 CHUNK_ROWS = 96  # keeps the work of one pass within the cache and its memory flat
-MIN_P_MV, MIN_P_RATIO, MIN_P_EXPLAINED = 0.015, 4.5, 0.45
-MIN_T_MV, MIN_T_RATIO = 0.03, 4.0
+MIN_P_MV, MIN_P_RATIO, MIN_P_EXPLAINED = 0.015, 4.0, 0.40
+STEADY_P_RATIO, STEADY_PR_MS = 3.0, 12.0  # a weaker P wave counts if all halves of the beats put it at one place
+MIN_T_MV, MIN_T_RATIO = 0.03, 3.2
 SEEN_MV = 0.04  # a wave of this height would have been seen if three standard errors stay below it
 
 
@@ -125,7 +127,7 @@ def analyse(
         return np.concatenate([getattr(p, name) for p in parts])
 
     rows = np.concatenate([p.beat_row + size for p, size in zip(parts, sizes, strict=True)])
-    rest = {
+    rest: dict[str, Any] = {
         name: joined(name) for name in Analysis.__dataclass_fields__ if name not in ("beat_row", "prepared")
     }
     return Analysis(beat_row=rows, **rest)
@@ -292,7 +294,7 @@ def mark_waves(mean: Average, rhythm: Rhythm) -> Marks:
     rr_ms = np.repeat(np.nan_to_num(rhythm.rr_median_s, nan=0.8) * 1000, m)
     project, energy = waves.p_projections(beat, on)
     p = waves.p_wave(project, energy, on, rr_ms)
-    pq = _level(beat, on, -20.0, 0.0)
+    pq = _level(beat, on, -24.0, 0.0)
     st = _level(beat, off, *waves.ST_AFTER_MS) - pq
     smooth = uniform_filter1d(uniform_filter1d(beat, waves.T_SMOOTH, axis=1), waves.T_SMOOTH, axis=1)
     t = waves.t_wave(smooth, off, np.minimum(rr_ms + p.on_ms - 24.0, 700.0), pq, rr_ms)
@@ -351,12 +353,15 @@ def read_values(mean: Average, marks: Marks, rhythm: Rhythm) -> tuple[NDArray[np
     value[:, 1:] = np.where(some[:, None], marks.value[:, 0], np.nan)
     p_mv = np.abs(marks.p.amp_mv.reshape(n_rows, m)[:, 0])
     explained = marks.p.explained.reshape(n_rows, m)[:, 0]
-    clear = (p_mv >= MIN_P_MV) & (p_mv >= MIN_P_RATIO * marks.p_error) & (explained >= MIN_P_EXPLAINED)
+    onset = marks.value[:, 1:, 0]
+    steady = np.sqrt(((onset - marks.value[:, :1, 0]) ** 2).mean(axis=1)) <= STEADY_PR_MS
+    ratio = p_mv / np.maximum(marks.p_error, 1e-6)
+    clear = (ratio >= MIN_P_RATIO) | ((ratio >= STEADY_P_RATIO) & steady)
+    clear &= (p_mv >= MIN_P_MV) & (explained >= MIN_P_EXPLAINED)
     quiet = some & (mean.n_effective >= 3) & (3 * marks.p_error < SEEN_MV)
     value[~clear, 1] = np.nan
     absent[quiet & ~clear, 1] = 1
     # A P wave in most halves of the beats, but never at one place, stands in no fixed relation.
-    onset = marks.value[:, 1:, 0]
     wandering = (np.sqrt(((onset - onset.mean(axis=1, keepdims=True)) ** 2).mean(axis=1)) > 25.0) & (
         p_mv >= SEEN_MV
     )

@@ -68,7 +68,7 @@ def find_patient_first(
     *,
     lead_beats_s: Sequence[Floats],
     qrs_ms: Sequence[Floats] | None = None,
-    lead_has_data: Sequence[bool] | None = None,
+    lead_has_data: Sequence[bool] | Bools | None = None,
 ) -> list[PatientFirst]:
     """Stretches that need a look at the patient, in order of time.
 

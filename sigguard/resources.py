@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from importlib.resources import files
 from pathlib import Path
 
 from sigguard.errors import UsageError
 
 KINDS = ("models", "synthetic")
+_PACKAGE = Path(__file__).resolve().parent
 
 
 def resource_path(kind: str, name: str) -> Path:
@@ -19,20 +19,8 @@ def resource_path(kind: str, name: str) -> Path:
     """
     if kind not in KINDS:
         raise UsageError(f"kind of shipped file must be one of {', '.join(KINDS)}, found {kind!r}")
-    for folder in _folders(kind):
+    for folder in (_PACKAGE / f"_{kind}", _PACKAGE.parent / kind):
         path = folder / name
         if path.exists() and path.resolve().is_relative_to(folder.resolve()):
             return path
     raise UsageError(f"shipped file {kind}/{name} not found; the installation may be incomplete")
-
-
-def _folders(kind: str) -> list[Path]:
-    """Where a kind may lie: the installed package first, then the checkout."""
-    found = []
-    try:
-        installed = files(f"sigguard._{kind}")
-    except ModuleNotFoundError:
-        pass
-    else:
-        found.append(Path(str(installed)))
-    return [*found, Path(str(files("sigguard"))).parent / kind]

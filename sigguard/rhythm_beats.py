@@ -13,7 +13,6 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 from scipy.ndimage import maximum_filter1d, median_filter, uniform_filter1d
-from scipy.signal import find_peaks
 
 from sigguard.rhythm_shape import Work
 
@@ -75,12 +74,48 @@ def _steep_peaks(steepness: Floats, work: Work) -> tuple[Ints, Ints]:
     usual = median_filter(padded.reshape(n_leads, -1, second).max(axis=2), size=(1, 5), mode="nearest")
     apart = max(1, round(APART_S * work.fs_hz))
     tape = np.pad(steepness, ((0, 0), (1, apart)))  # leads end to end, too far apart to touch
-    peaks, _ = find_peaks(tape.ravel(), distance=apart)
+    peaks = spaced_peaks(tape.ravel(), apart)
     row, at = np.divmod(peaks, tape.shape[1])
     at -= 1
     value = steepness[row, at]
     keep = (value >= STEEP_SHARE * usual[row, at // second]) & (value > 1e-6)
     return row[keep], at[keep]
+
+
+def spaced_peaks(x: Floats, apart: int) -> Ints:
+    """Local maxima of x (n,), thinned so that any two are ``apart`` samples or more apart, the higher one kept.
+
+    A flat top counts as its middle; the ends are none. What scipy.signal.find_peaks gives (a test holds the two
+    against each other), without the second that importing scipy.signal takes. Of two equally high, the later stays.
+    """
+    if not len(x):
+        return np.empty(0, dtype=np.int64)
+    edge = np.flatnonzero(np.diff(x)) + 1
+    start, stop = np.concatenate([[0], edge]), np.concatenate([edge, [len(x)]])
+    value = x[start]
+    top = np.flatnonzero((value[1:-1] > value[:-2]) & (value[1:-1] > value[2:])) + 1
+    at = (start[top] + stop[top] - 1) // 2
+    rank = np.empty(len(at), dtype=np.int64)
+    rank[np.argsort(x[at], kind="stable")] = np.arange(len(at))
+    kept = []
+    while len(at):
+        best = rank == _highest_near(at, rank, apart)  # the highest of those left nearby stay ...
+        kept.append(at[best])
+        gone = _highest_near(at, np.where(best, rank, -1), apart) >= 0  # ... and all near to them go
+        at, rank = at[~gone], rank[~gone]
+    return np.sort(np.concatenate(kept)) if kept else at
+
+
+def _highest_near(at: Ints, value: Ints, apart: int) -> Ints:
+    """For each peak the highest value among the peaks less than ``apart`` samples away, itself included."""
+    out = value.copy()
+    for k in range(1, len(at)):
+        near = at[k:] - at[:-k] < apart
+        if not near.any():
+            break
+        out[:-k] = np.where(near, np.maximum(out[:-k], value[k:]), out[:-k])
+        out[k:] = np.where(near, np.maximum(out[k:], value[:-k]), out[k:])
+    return out
 
 
 def _given_peaks(steepness: Floats, work: Work, lead_beats_s: Sequence[Floats]) -> tuple[Ints, Ints]:

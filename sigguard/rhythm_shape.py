@@ -14,7 +14,8 @@ from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 from scipy import fft
 from scipy.ndimage import uniform_filter1d
-from scipy.signal import firwin, upfirdn
+
+from sigguard.filters import low_pass_taps
 
 Floats = NDArray[np.floating]
 Bools = NDArray[np.bool_]
@@ -83,7 +84,7 @@ def prepare(x_mv: Floats, fs_hz: float) -> Work:
 
 @lru_cache(maxsize=8)
 def _low_pass(fs_hz: float, rate: float) -> Floats:
-    return firwin(2 * round(0.05 * fs_hz) + 1, min(HIGHEST_HZ, 0.42 * rate), fs=fs_hz)
+    return low_pass_taps(2 * round(0.05 * fs_hz) + 1, min(HIGHEST_HZ, 0.42 * rate), fs_hz)
 
 
 def _nearest_fill(x: Floats, present: Bools) -> Floats:
@@ -100,13 +101,12 @@ def _nearest_fill(x: Floats, present: Bools) -> Floats:
 def _decimate(x: Floats, taps: Floats, factor: int) -> Floats:
     """Zero-phase FIR filter with the ends held, every ``factor``-th sample kept, the first one first."""
     half = len(taps) // 2
-    shift = (-2 * half) % factor  # upfirdn keeps samples 0, factor, …: make sample 2·half one of them
-    padded = np.concatenate(
-        [np.zeros((x.shape[0], shift)), np.repeat(x[:, :1], half, 1), x, np.repeat(x[:, -1:], half, 1)],
-        axis=1,
-    )
-    first = (2 * half + shift) // factor
-    return upfirdn(taps, padded, up=1, down=factor, axis=1)[:, first : first - (-x.shape[1] // factor)]
+    padded = np.pad(x, ((0, 0), (half, half)), mode="edge")
+    n_out = -(-x.shape[1] // factor)
+    out = np.zeros((x.shape[0], n_out))
+    for k, tap in enumerate(taps):  # some fifty taps, each over all kept samples at once
+        out += tap * padded[:, k : k + x.shape[1] : factor]
+    return out
 
 
 def _any_in_step(present: Bools, factor: int, n_out: int) -> Bools:

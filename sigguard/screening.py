@@ -7,7 +7,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import cache
 from pathlib import Path
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -58,7 +58,7 @@ class _InMemory:
         return self.recording.info
 
     def read(self, start: int = 0, stop: int | None = None) -> NDArray[np.float64]:
-        return self.recording.signal_mv[:, start:stop]
+        return np.asarray(self.recording.signal_mv[:, start:stop], dtype=np.float64)
 
 
 def check(
@@ -341,7 +341,7 @@ def _global_part(
         ),
         "value": found.value,
         "bound": np.where(np.isfinite(bound) & has, bound, np.nan),
-        "reliable": model.reliable_global(scores, tolerances(profile)[1:4]) & has,
+        "reliable": model.reliable_global(scores, tolerances(profile)[1:4].tolist()) & has,
         "absent": found.absent,
         "weight": found.weight,
     }
@@ -351,7 +351,9 @@ def _joined(parts: Sequence[Segments]) -> Segments:
     if len(parts) == 1:
         return parts[0]
     columns = [name for name in Segments.__dataclass_fields__ if name not in ("leads", "feature_names")]
-    joined = {name: np.concatenate([getattr(part, name) for part in parts]) for name in columns}
+    joined: dict[str, Any] = {
+        name: np.concatenate([getattr(part, name) for part in parts]) for name in columns
+    }
     return replace(parts[0], **joined)
 
 
@@ -410,7 +412,7 @@ def _patient_first(source: Source, beats: Sequence[NDArray[np.int64]]) -> list[P
                 info.fs_hz,
                 info.leads,
                 lead_beats_s=[(at[(at >= first) & (at < last)] - first) / info.fs_hz for at in beats],
-                lead_has_data=has_data if info.n_samples > size else None,
+                lead_has_data=has_data.tolist() if info.n_samples > size else None,
             ),
             offset_s=first / info.fs_hz,
             start_s=start / info.fs_hz,

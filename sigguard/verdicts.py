@@ -13,6 +13,7 @@ from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS
 RATE, PR, QRS, QT, ST = range(len(MEASUREMENTS))
 NO_WAVE, TOO_SMALL_HERE = ABSENT.index("no-wave"), ABSENT.index("too-small-here")
 MIN_CLIPPED_S, MIN_FLAT_S = 0.05, 0.3
+MAINS_UV = 25.0  # peak; the hum of the stability clause of IEC 60601-2-51
 WEAK_UV = 150.0  # QRS peak to peak; 5 mm is the usual lower end (common practice), this is 1.5 mm
 HIGH_PASS_TAKES_ST_HZ = (
     0.1  # a 0.5 Hz analogue high-pass distorts ST, 0.05 Hz is asked for (Kligfield et al. 2007)
@@ -33,7 +34,7 @@ def judge_rows(
     has = np.isfinite(analysis.value)
     bound = model.bound(scores)
     bound = np.where(np.isfinite(bound) & has, bound, np.nan)
-    reliable = model.reliable(scores, tolerance) & has
+    reliable = model.reliable(scores, tolerance.tolist()) & has
     absent = np.where(model.absence_holds(scores) & ~has, analysis.absent, 0).astype(np.int8)
     return scores, bound, reliable, absent, fault_p
 
@@ -64,7 +65,8 @@ def limit_by_recording(
         low, high = band_hz[lead_index, 0], band_hz[lead_index, 1]
         allowed[:, ST] &= ~(low > HIGH_PASS_TAKES_ST_HZ)
         allowed[:, QRS] &= ~(high < LOW_PASS_TAKES_QRS_HZ)
-    return reliable & allowed, ~allowed.all(axis=1)
+    limited: NDArray[np.bool_] = ~np.all(allowed, axis=1)
+    return reliable & allowed, limited
 
 
 def fault_rows(
@@ -89,6 +91,9 @@ def fault_rows(
     for name, least in (("flat", MIN_FLAT_S), ("clipped", MIN_CLIPPED_S), ("missing", 1e-9)):
         seconds = column(f"{name}_s")
         out[:, FAULTS.index(name)] = np.where(seconds >= least, np.minimum(seconds / length_s, 1.0), 0.0)
+    # Hum is measured outright: what a recorder must put up with in a stability test is called by name.
+    hum = np.hypot(column("mains_uv"), column("mains_harmonics_uv")) >= MAINS_UV
+    out[:, FAULTS.index("mains")] = np.maximum(out[:, FAULTS.index("mains")], hum)
     height = column("qrs_pp_uv")
     out[:, FAULTS.index("weak")] = (height > 0) & (height < WEAK_UV)
     out[:, FAULTS.index("narrow-band")] = limited

@@ -34,7 +34,7 @@ T_SMOOTH = 11  # columns, twice
 T_LIMB_MS = 330.0  # usual place of the limb that ends the T wave at 60/min
 LAST_LIMB = 0.55
 T_INWARD_MS = 20.0  # what the smoothing adds to the end
-ST_AFTER_MS = (52.0, 76.0)  # J + 60 ms, a mean over 24 ms about it
+ST_AFTER_MS = (40.0, 80.0)  # J + 60 ms, a mean over 40 ms about it
 
 
 def slope_uv_ms(beat_mv: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -123,14 +123,14 @@ def _bumps() -> tuple[NDArray, NDArray, NDArray, NDArray]:
 class PWave:
     """The P wave of (R,) averaged beats."""
 
-    on_ms: NDArray[np.float64]  # from the fiducial
-    off_ms: NDArray[np.float64]
-    amp_mv: NDArray[np.float64]  # height of the best bump, signed
-    explained: NDArray[np.float64]  # share of the window's variance
-    rival: NDArray[np.float64]  # energy of the best bump elsewhere over that of the best, 0 to 1
+    on_ms: NDArray[np.floating]  # from the fiducial
+    off_ms: NDArray[np.floating]
+    amp_mv: NDArray[np.floating]  # height of the best bump, signed
+    explained: NDArray[np.floating]  # share of the window's variance
+    rival: NDArray[np.floating]  # energy of the best bump elsewhere over that of the best, 0 to 1
     atom: NDArray[np.intp]
-    score: NDArray[np.float64]  # (R, A) energies
-    loading: NDArray[np.float64]  # (R,) mV: projection on the best atom
+    score: NDArray[np.floating]  # (R, A) energies
+    loading: NDArray[np.floating]  # (R,) mV: projection on the best atom
 
 
 def p_projections(beat_mv: NDArray[np.float64], qrs_on_ms: NDArray[np.float64]) -> tuple[NDArray, NDArray]:
@@ -234,6 +234,8 @@ def t_wave(
     area = np.where((column >= steep[:, None]) & (column <= right[:, None]), area, -np.inf)
     best = np.maximum(area.max(axis=1), 1e-9)
     weight = np.exp(np.maximum(area / best[:, None] - 1.0, -10.0) / 0.01)
+    # A limb that the limit cuts off spans no trapezium: it has no end to give.
+    room &= area.max(axis=1) > 1e-9
     end = (weight * column).sum(axis=1) / np.maximum(weight.sum(axis=1), 1e-12)
     foot = y[rows, np.clip(np.rint(end).astype(int), 0, LENGTH - 1)]
 

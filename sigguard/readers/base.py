@@ -143,7 +143,7 @@ def read_head(path: Path, n_bytes: int = HEAD_BYTES) -> bytes:
     try:
         if not path.is_file():
             kind = (
-                "a folder"
+                "a folder in which no recording was found"
                 if path.is_dir()
                 else "something that is no regular file"
                 if path.exists()

@@ -75,6 +75,19 @@ class Report:
         return self.judgement.verdict
 
     @property
+    def advice_to_tell(self) -> tuple[Advice, ...]:
+        """The advice by rank; what was accepted is not to be recorded again."""
+        ranked = sorted(self.advice, key=lambda a: a.rank)
+        return tuple(
+            a for a in ranked if self.verdict != "accept" or a.action not in ("wait-and-repeat", "nothing")
+        )
+
+    @property
+    def for_next_time(self) -> bool:
+        """Whether the advice is for the next recording, this one being good as it is and nobody in danger."""
+        return self.verdict == "accept" and not self.patient_first
+
+    @property
     def taken_for_granted(self) -> tuple[str, ...]:
         """What the reader assumed, and which signals were left out as not ECG."""
         left_out = self.info.left_out

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.report.document import Report
-from sigguard.report.words import FAULT_WORDS, GRADE_WORDS, clean, clock
+from sigguard.report.words import ALARM_WORDS, FAULT_WORDS, GRADE_WORDS, alarm_between, clean, clock
 from sigguard.segments import FAULTS, GRADES, Segments
 
 MAX_COLUMNS = 600
@@ -94,7 +94,7 @@ def map_svg(report: Report) -> str:
         parts.append(
             f'<text class="rowname" x="{LABEL_W - 8}" y="{y + 18}" text-anchor="end">{escape(_short(clean(lead)))}</text>'
         )
-        parts.append(_row(found, i, y, scale, words=_worst_fault(report.segments, i) if few else None))
+        parts.append(_row(found, i, y, scale, words=_words(report, i) if few else None))
     parts += [_alarm(a.start_s, a.end_s, a.text, scale, top, bottom) for a in report.patient_first]
     parts.append(_axis(duration_s, scale, bottom))
     return "".join(parts) + "</svg>"
@@ -150,11 +150,18 @@ def legend_svg(name: str) -> str:
     return f'<svg class="key" width="34" height="22" viewBox="0 0 34 22" aria-hidden="true">{grade_bar(name, 1, 33, -1)}</svg>'
 
 
-def _worst_fault(segments: Segments, lead: int) -> list[str]:
-    """The word of the gravest fault in each segment of a lead, in time order; empty where none."""
-    fault = segments.fault[segments.lead_index == lead]
-    kinds = fault.argmax(axis=1) if len(fault) else []
-    return [FAULT_WORDS[FAULTS[k]] if row[k] > 0 else "" for k, row in zip(kinds, fault, strict=True)]
+def _words(report: Report, lead: int) -> list[str]:
+    """The word of the gravest fault in each segment of a lead, in time order; empty where none.
+
+    Where somebody must look at the patient it says so: what may be a lethal rhythm has no fault.
+    """
+    mine = report.segments.rows(report.segments.lead_index == lead)
+    words = []
+    for start_s, end_s, fault in zip(mine.start_s.tolist(), mine.end_s.tolist(), mine.fault, strict=True):
+        k = int(fault.argmax())
+        name = FAULT_WORDS[FAULTS[k]] if fault[k] > 0 else ""
+        words.append(ALARM_WORDS if alarm_between(report.patient_first, start_s, end_s) else name)
+    return words
 
 
 def _alarm(start_s: float, end_s: float, text: str, scale: float, top: int, bottom: int) -> str:

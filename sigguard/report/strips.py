@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.report.document import Report
-from sigguard.report.words import FAULT_WORDS, GRADE_WORDS, clean, clock, listing
+from sigguard.report.words import ALARM_WORDS, FAULT_WORDS, GRADE_WORDS, alarm_between, clean, clock, listing
 from sigguard.segments import FAULTS, GRADES
 
 UNITS_PER_S, UNITS_PER_MV = 2500, 1000
@@ -120,7 +120,8 @@ def _strip(report: Report, x_mv: NDArray[np.float64], lead_index: int, start: in
         if len(rows):
             grade = GRADES[int(rows.grade.min())]
         for t0, t1, faults in zip(rows.start_s.tolist(), rows.end_s.tolist(), rows.fault, strict=True):
-            if (text := _fault_text(faults)) != "":
+            alarm = alarm_between(report.patient_first, max(t0, start_s), min(t1, end_s))
+            if (text := ALARM_WORDS if alarm else _fault_text(faults)) != "":
                 disturbed.append(Disturbed(max(t0, start_s), min(t1, end_s), text))
     return StripData(
         lead, start_s, x_mv, info.fs_hz, beats[first:last] - start, tuple(disturbed), heading, grade
@@ -267,13 +268,17 @@ def _gaps(strip: StripData) -> list[Disturbed]:
 
 
 def _hatch(strip: StripData, d: Disturbed, height: int) -> str:
-    """Slanted lines over a stretch, and what is wrong there in the line under the trace."""
+    """Slanted lines over a stretch, and what is wrong there in the line under the trace.
+
+    No slanted lines where somebody must look at the patient: that is to be seen, not crossed out.
+    """
     left = MARGIN + round((d.start_s - strip.start_s) * UNITS_PER_S)
     right = MARGIN + round((d.end_s - strip.start_s) * UNITS_PER_S)
     if right <= left:
         return ""
     lines = []
-    for corner in range(left - left % 400 - height, right, 150 if d.text == GAP else 400):
+    step = 150 if d.text == GAP else 400
+    for corner in range(left - left % 400 - height, right, step) if d.text != ALARM_WORDS else ():
         # From (corner, height) up and right to (corner + height, 0), as far as it lies inside.
         x0, x1 = max(corner, left), min(corner + height, right)
         if x1 > x0:
@@ -289,7 +294,8 @@ def _hatch(strip: StripData, d: Disturbed, height: int) -> str:
             f'<text class="why" x="{left + 40}" y="{height + 310}">{escape(d.text)}</text>'
         )
     title = f"<title>{escape(d.text)}</title>"
-    return f'<path class="hatch" d="{"".join(lines)}">{title}</path>{label}'
+    hatch = f'<path class="hatch" d="{"".join(lines)}">{title}</path>' if lines else ""
+    return hatch + label
 
 
 def _title(strip: StripData) -> str:
@@ -297,7 +303,9 @@ def _title(strip: StripData) -> str:
     if strip.grade is not None:
         words += f"; can be measured: {GRADE_WORDS[strip.grade]}"
     causes = dict.fromkeys(d.text for d in strip.disturbed)
-    return words + (f"; disturbed by {listing(causes)}" if causes else "")
+    faults = [cause for cause in causes if cause != ALARM_WORDS]
+    words += f"; {ALARM_WORDS}" if ALARM_WORDS in causes else ""
+    return words + (f"; disturbed by {listing(faults)}" if faults else "")
 
 
 def by_heading(strips: Sequence[StripData]) -> list[tuple[str, list[StripData]]]:

@@ -13,8 +13,9 @@ def one_line(report: Report) -> str:
     Without line ends and control characters, whatever the header holds.
     """
     parts = [VERDICT_WORDS[report.verdict].lower(), f"can be trusted: {measurable_words(report)}"]
-    if report.advice:
-        parts.append(min(report.advice, key=lambda a: a.rank).text.rstrip("."))
+    if report.advice_to_tell:
+        act = report.advice_to_tell[0].text.rstrip(".")
+        parts.append(f"next time: {act}" if report.for_next_time else act)
     line = f"{report.info.name}: {'; '.join(parts)}"
     if report.patient_first:
         alarm = report.patient_first[0]

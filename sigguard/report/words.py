@@ -5,6 +5,8 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable
 
+from sigguard.findings import PatientFirst
+
 GRADE_WORDS = {
     "all": "everything",
     "intervals": "all but ST",
@@ -43,6 +45,7 @@ PATTERN_WORDS = {
     "wide-fast": "looks like a wide, fast rhythm",
     "standstill": "looks like a standstill",
 }
+ALARM_WORDS = "patient first"
 PROFILE_WORDS = {
     "resting": "for a resting ECG",
     "strip": "for a rhythm strip",
@@ -71,6 +74,11 @@ def cell(text: object) -> str:
     if any(sign in text for sign in ',"\r\n') or text != text.strip():
         text = '"' + text.replace('"', '""') + '"'
     return text
+
+
+def alarm_between(alarms: Iterable[PatientFirst], start_s: float, end_s: float) -> bool:
+    """Whether a patient-first stretch lies on any part of the time from start to end."""
+    return any(a.start_s < end_s and a.end_s > start_s for a in alarms)
 
 
 def listing(words: Iterable[str], *, last: str = "and") -> str:

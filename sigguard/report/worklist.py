@@ -42,7 +42,9 @@ class WorklistRow:
 
 def row_of(report: Report, *, link: str = "") -> WorklistRow:
     """The row of a report that was made."""
-    to_do = min(report.advice, key=lambda a: a.rank).text if report.advice else ""
+    to_do = report.advice_to_tell[0].text if report.advice_to_tell else ""
+    if to_do and report.for_next_time:
+        to_do = f"Nothing. Next time: {to_do}"
     if report.patient_first:
         alarm = report.patient_first[0]
         to_do = f"Look at the patient: {PATTERN_WORDS.get(alarm.pattern, alarm.pattern)} {stretch(alarm.start_s, alarm.end_s)}."
@@ -52,6 +54,8 @@ def row_of(report: Report, *, link: str = "") -> WorklistRow:
     for lead in report.lead_summaries:
         for fault in lead.faults:
             share[fault.kind] = share.get(fault.kind, 0.0) + fault.fraction
+    if report.patient_first:
+        share = {}  # what may be a lethal rhythm is not listed under what spoils the signal
     electrodes = [e for e in report.electrodes if e.share == e.share]
     return WorklistRow(
         name=report.info.name,

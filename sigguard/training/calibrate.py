@@ -8,8 +8,7 @@ chapter 7, from memory). Neighbours that break the order "a better score, a smal
 
 The promise must hold for each kind of noise and not only for their mixture. So the table learned from all
 rows is then asked to each kind: its scores are taken for worse, by one step on the logit scale after
-another, until the rows of the kind keep to their bounds, all together and in each third by score, with
-the same confidence. The kind that needs most decides.
+another, until the rows of the kind keep to their bounds, all together and in each third by score. The kind that needs most decides.
 """
 
 from __future__ import annotations
@@ -30,7 +29,7 @@ Statistic = Callable[[Array], float]
 _FINENESS = 12  # pieces to a window
 _LEAST = 1e-9
 _SHIFTS = np.arange(0.0, 6.01, 0.05)  # steps by which a score may be taken for worse, on the logit scale
-_ENOUGH, _THIRD, _FEW = 150, 100, 30  # rows that can prove 95 %, that make a third, too few to speak below
+_THIRD, _FEW = 100, 30  # rows that make a third, too few to speak below
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,8 +37,8 @@ class CalibrationSettings:
     """window: rows a statistic rests on before pooling; confidence: that it is on the safe side;
     min_group: a kind of noise with fewer rows is judged together with the rest only."""
 
-    window: int = 200
-    confidence: float = 0.9
+    window: int = 400
+    confidence: float = 0.75
     min_group: int = 60
 
 
@@ -176,21 +175,21 @@ def _safe_for_each(
     for steps in _SHIFTS:
         candidate = shifted(table, steps) if steps else table
         asked = [rows for rows in groups if rows.sum() >= settings.min_group]
-        if all(_keeps_promise(kept(candidate, rows), settings.confidence) for rows in asked):
+        if all(_keeps_promise(kept(candidate, rows)) for rows in asked):
             return candidate
     return StepTable(edge=np.zeros(0), level=np.zeros(0), below=table.below)
 
 
-def _keeps_promise(kept: NDArray[np.bool_], confidence: float) -> bool:
+def _keeps_promise(kept: NDArray[np.bool_]) -> bool:
     """Whether (n,) rows of one kind, ordered by score, keep to it: all together, and in each third.
 
-    Together the lower limit of their share must reach 95 %. A third, or few rows, cannot prove so
-    much; there the share itself must. A handful says nothing.
+    The table already carries its allowance, so here the shares themselves are asked to reach 95 %. A
+    handful of rows says nothing.
     """
     n = len(kept)
     if n < _FEW:
         return True
-    share = lower_share(kept, confidence=confidence) if n >= _ENOUGH else float(np.mean(kept))
+    share = float(np.mean(kept))
     parts = np.array_split(kept, 3) if n >= 3 * _THIRD else []
     return share >= PROMISE and all(np.mean(part) >= PROMISE for part in parts)
 

@@ -44,13 +44,13 @@ class Size:
     strips: tuple[int, int, int]
     cells: int
     shapes: tuple[Shape, Shape, Shape] = (Shape(), Shape(), Shape())
-    real_every: int = 5  # one chunk in so many uses real carriers, if there are any
+    real_every: int = 4  # one chunk in so many uses real carriers, if there are any
 
 
 SIZES = {
     "full": Size(
-        rows=(80, 64, 24),
-        strips=(26, 24, 10),
+        rows=(90, 80, 24),
+        strips=(50, 70, 16),
         cells=30,
         shapes=(Shape(10, 4, 8), Shape(32, 2, 5), Shape(16, 4, 5)),
     ),

@@ -29,7 +29,7 @@ class Growth:
 GRID = tuple(
     Growth(max_leaf_nodes=leaves, learning_rate=rate, max_iter=trees, l2=l2)
     for (leaves, rate, trees), l2 in itertools.product(
-        ((8, 0.1, 140), (15, 0.07, 140), (24, 0.07, 110)), (1.0, 20.0)
+        ((8, 0.12, 150), (15, 0.08, 150), (24, 0.1, 150)), (1.0, 20.0)
     )
 )
 SMALL = Growth(max_leaf_nodes=8, learning_rate=0.15, max_iter=30, min_samples_leaf=15)

@@ -11,8 +11,8 @@ import numpy as np
 import pytest
 
 from sigguard.errors import UsageError
-from sigguard.findings import CAUTION, Advice
-from sigguard.report.grademap import MAX_COLUMNS, NO_DATA, grade_map
+from sigguard.findings import CAUTION, Advice, Judgement
+from sigguard.report.grademap import MAX_COLUMNS, NO_DATA, grade_map, map_svg
 from sigguard.report.page import duration_words, measurable_words, render_page
 from sigguard.report.strips import UNITS_PER_S, StripData, choose_strips, strip_svg, trace_path
 from sigguard.report.text import one_line
@@ -302,3 +302,31 @@ def test_words():
         "13 d 2 h",
     ]
     assert (listing([]), listing("a"), listing("abc")) == ("", "a", "a, b and c")
+
+
+def test_what_was_accepted_is_not_to_be_recorded_again():
+    wait = Advice(1, "wait-and-repeat", None, "Lie still, then record again.")
+    mains = Advice(2, "cut-mains", None, "Keep the mains cable away.")
+    fine = make_report(judgement=Judgement("accept"), advice=(wait, mains))
+    assert one_line(fine).endswith("next time: Keep the mains cable away")
+    assert row_of(fine).to_do == "Nothing. Next time: Keep the mains cable away."
+    assert "record again" not in Outline(page_of(fine)).text
+    alone = make_report(judgement=Judgement("accept"), advice=(wait,))
+    assert row_of(alone).to_do == "Nothing." and "record again" not in one_line(alone)
+    again = make_report(judgement=Judgement("repeat"), advice=(wait, mains))
+    assert one_line(again).endswith("Lie still, then record again")
+
+
+def test_no_fault_is_named_where_somebody_must_look_at_the_patient():
+    assert row_of(make_report()).main_fault and not row_of(alarm_report()).main_fault
+    assert "movement" in map_svg(make_report()) and "movement" not in map_svg(alarm_report())
+    assert "patient first" in map_svg(alarm_report())
+    report = alarm_report()
+    strips = choose_strips(report, lambda first, last: make_signal()[:, first:last])
+    assert {d.text for strip in strips for d in strip.disturbed} == {"patient first"}
+
+
+def test_the_page_tells_once_to_look_at_the_patient():
+    look = Advice(1, "look-at-patient", "patient", "Look at the patient now, before the leads.", ("why.",))
+    text = Outline(page_of(alarm_report(advice=(look,)))).text
+    assert text.count("Look at the patient now, before the leads.") == 1
