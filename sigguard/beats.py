@@ -12,19 +12,26 @@ the QRS raises it nowhere.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.ndimage import maximum_filter1d, uniform_filter1d
 
+from sigguard.beat_judge import Seen, candidate_features
 from sigguard.filters import RowTransform, band_pass, high_pass, low_pass
 
 REFRACTORY_S = 0.2
+QUIET = (0.06, 0.15)  # level between the beats: below the rule is trusted, above the judge
+SURE_AGAINST = 0.05
 MATCH_S = 0.15  # ANSI/AAMI EC57
 QRS_BAND_HZ = (4.0, 25.0)
 STANDS_OUT, LEFT_SHARE = 1.3, 0.75
 SHAPE_COUNTS = (0.2, 3.0)  # how much likeness to the typical complex weighs: at rest, and more with the noise
+
+
+Judge = Callable[[NDArray[np.float64]], NDArray[np.float64]]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -72,6 +79,11 @@ def length_curve(smooth_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.flo
     return uniform_filter1d(step, max(3, int(0.13 * fs_hz)), axis=1, mode="nearest") * int(0.13 * fs_hz)
 
 
+def length_band(work: RowTransform) -> NDArray[np.float64]:
+    """Rows as the ``length`` detector wants them, 1 to 16 Hz."""
+    return work.band(high_pass(work.freq_hz, 1.0) * low_pass(work.freq_hz, 16.0, 3))
+
+
 def candidates(curve: NDArray[np.float64], fs_hz: float) -> Candidates:
     """Peaks of a detection function at least REFRACTORY_S apart."""
     row, at = local_peaks(curve, int(0.5 * REFRACTORY_S * fs_hz))
@@ -89,6 +101,10 @@ class Beats:
     weakest_kept: NDArray[np.float64]  # (R,) strength of the least beat, relative to the threshold
     strongest_left: NDArray[np.float64]  # (R,) strength of the best candidate that is no beat, likewise
     between: NDArray[np.float64]  # (R,) level between the strong peaks over the typical height
+    least_chance: NDArray[
+        np.float64
+    ]  # (R,) the judge's probability of the beat it believes least; 1 without one
+    best_left: NDArray[np.float64]  # (R,) its probability of the best candidate left out; 0 without one
 
 
 def complexes(qrs_mv: NDArray[np.float64], row: NDArray, at: NDArray, half: int) -> NDArray[np.float64]:
@@ -159,11 +175,49 @@ def parabola_top(
     return mid, np.where(inner, 0.5 * (left - right) / np.where(inner, bend, -1.0), 0.0)
 
 
-def find_beats(work: RowTransform) -> Beats:
-    """Beats of all rows, as the ``slope`` detector finds them and the typical complex weighs them.
+def find_beats(work: RowTransform, judge: Judge | None = None) -> Beats:
+    """Beats of all rows: candidates of the ``slope`` detector, weighed by rule and, in noise, by ``judge``.
 
-    Flat rows give none. The threshold rises with the level of what lies between the strong peaks, so
-    that noise of the same band does not turn into beats.
+    ``judge`` gives the probability that each of some described candidates is a beat (see beat_judge);
+    without it the rule stands alone. Where it is quiet the rule's beats are dropped only if the judge
+    is nearly sure against them: an odd complex in a clean row is more likely ectopy than noise. Flat
+    rows give none.
+    """
+    seen, threshold, shift = survey(work)
+    keep = seen.kept
+    if judge is not None and len(seen.row):
+        chance = judge(candidate_features(seen))
+        doubt = np.clip((seen.between - QUIET[0]) / (QUIET[1] - QUIET[0]), 0.0, 1.0)[seen.row]
+        asked = np.where(keep, SURE_AGAINST + (0.5 - SURE_AGAINST) * doubt, 0.5)
+        keep = apart(seen, chance, chance >= asked)
+    # A complex that resembles the typical one is timed by it; any other by its own energy.
+    at = seen.at.astype(np.float64) + np.where(seen.likeness >= 0.7, shift, 0.0)
+    margin = seen.strength / threshold[seen.row]
+    weakest, left = np.full(len(seen.between), 9.0), np.zeros(len(seen.between))
+    np.minimum.at(weakest, seen.row[keep], margin[keep])
+    np.maximum.at(left, seen.row[~keep], margin[~keep])
+    least, most = np.ones(len(seen.between)), np.zeros(len(seen.between))
+    if judge is not None and len(seen.row):
+        np.minimum.at(least, seen.row[keep], chance[keep])
+        np.maximum.at(most, seen.row[~keep], chance[~keep])
+    return Beats(
+        seen.row[keep],
+        at[keep],
+        seen.likeness[keep],
+        seen.height[keep],
+        weakest,
+        left,
+        seen.between,
+        least,
+        most,
+    )
+
+
+def survey(work: RowTransform) -> tuple[Seen, NDArray[np.float64], NDArray[np.float64]]:
+    """(all candidates as described for a judge, threshold of each row, shift to the typical complex of each).
+
+    The rule's threshold rises with the level of what lies between the strong peaks, so that noise of
+    the same band does not turn into beats.
     """
     fs_hz = work.fs_work_hz
     curve = slope_curve(work)
@@ -172,9 +226,8 @@ def find_beats(work: RowTransform) -> Beats:
     height = peaks.height / level[peaks.row]
     qrs_mv = work.band(band_pass(work.freq_hz, *QRS_BAND_HZ))
     seeds = height >= 0.5
-    shape = typical_complex(
-        complexes(qrs_mv, peaks.row[seeds], peaks.at[seeds], int(0.08 * fs_hz)), peaks.row[seeds], len(curve)
-    )
+    cuts = complexes(qrs_mv, peaks.row, peaks.at, int(0.08 * fs_hz))
+    shape = typical_complex(cuts[seeds], peaks.row[seeds], len(curve))
     likeness, shift = best_likeness(qrs_mv, peaks.row, peaks.at, shape, int(0.04 * fs_hz))
     between = level_between(curve / level[:, None], peaks.row, peaks.at, height >= 0.6, int(0.12 * fs_hz))
     # Where it is quiet an odd shape is believed (ectopy); the noisier, the more a beat must look like one.
@@ -184,13 +237,42 @@ def find_beats(work: RowTransform) -> Beats:
     threshold = np.clip(4.0 * between, 0.28, 0.7)
     keep = separate(peaks, strength, sharp, fs_hz, strength >= threshold[peaks.row])
     keep = search_back(peaks, strength, fs_hz, keep, threshold)
-    # A complex that resembles the typical one is timed by it; any other by its own energy.
-    at = peaks.at.astype(np.float64) + np.where(likeness >= 0.7, shift, 0.0)
-    margin = strength / threshold[peaks.row]
-    weakest, left = np.full(len(curve), 9.0), np.zeros(len(curve))
-    np.minimum.at(weakest, peaks.row[keep], margin[keep])
-    np.maximum.at(left, peaks.row[~keep], margin[~keep])
-    return Beats(peaks.row[keep], at[keep], likeness[keep], height[keep], weakest, left, between)
+    length = maximum_filter1d(length_curve(length_band(work), fs_hz), 25, axis=1)[peaks.row, peaks.at]
+    seen = Seen(
+        peaks.row,
+        peaks.at,
+        height,
+        sharp,
+        length,
+        likeness,
+        strength,
+        keep,
+        cuts,
+        between,
+        curve.shape[1],
+        fs_hz,
+    )
+    return seen, threshold, shift
+
+
+def apart(seen: Seen, chance: NDArray[np.float64], keep: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Of two kept candidates within the refractory time the less likely goes."""
+    keep = keep.copy()
+    for _ in range(6):
+        index = np.flatnonzero(keep)
+        a, b = index[:-1], index[1:]
+        close = (seen.row[a] == seen.row[b]) & ((seen.at[b] - seen.at[a]) < REFRACTORY_S * seen.fs_hz)
+        if not close.any():
+            break
+        weaker, stronger = (
+            np.where(chance[a] < chance[b], a, b)[close],
+            np.where(chance[a] < chance[b], b, a)[close],
+        )
+        beaten = np.zeros(len(keep), dtype=bool)
+        beaten[weaker] = True
+        drop = weaker[~beaten[stronger]]
+        keep[drop if len(drop) else weaker[:1]] = False
+    return keep
 
 
 def level_between(
@@ -311,8 +393,7 @@ def agreement(
 
 def length_beats(work: RowTransform) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
     """(row, work sample) of the beats that the ``length`` detector finds by itself."""
-    smooth = work.band(high_pass(work.freq_hz, 1.0) * low_pass(work.freq_hz, 16.0, 3))
-    peaks = candidates(length_curve(smooth, work.fs_work_hz), work.fs_work_hz)
+    peaks = candidates(length_curve(length_band(work), work.fs_work_hz), work.fs_work_hz)
     strength = peaks.height / np.maximum(peaks.level, 1e-9)[peaks.row]
     keep = separate(peaks, strength, np.ones(len(strength)), work.fs_work_hz, strength >= 0.5)
     return peaks.row[keep], peaks.at[keep]

@@ -15,12 +15,12 @@ if TYPE_CHECKING:
     from sigguard.averaging import Average, BeatStack
     from sigguard.measure import Marks, Rhythm
 
-FEATURE_VERSION = 1
+FEATURE_VERSION = 2
 
 BEAT_FEATURES: tuple[str, ...] = (
     "duration_s", "beats_n", "beats_averaged_n", "rr_median_s", "rr_min_s", "rr_max_s", "rr_spread_ratio", "longest_gap_s",
     "b_sqi", "likeness_median", "likeness_low", "height_low_ratio", "height_high_ratio",
-    "weakest_kept_ratio", "strongest_left_ratio", "between_ratio",
+    "weakest_kept_ratio", "strongest_left_ratio", "between_ratio", "least_chance", "best_left_chance",
     "qrs_pp_uv", "snr_db", "residual_uv", "stray_low_uv", "stray_high_ratio", "averages_effective_n",
     "template_correlation",
     "pq_scatter_uv", "slope_noise_ratio",
@@ -128,6 +128,8 @@ def _detection_columns(
         "weakest_kept_ratio": found.weakest_kept,
         "strongest_left_ratio": found.strongest_left,
         "between_ratio": found.between,
+        "least_chance": found.least_chance,
+        "best_left_chance": found.best_left,
     }
 
 

@@ -183,13 +183,15 @@ def _measure(
     weight = np.where(core > 1e-4, 1.0 / (1.0 + (ratio / SLOPE_FLOOR) ** 2), 0.0)
     share = weight / np.maximum(weight.sum(axis=1, keepdims=True), 1e-12)
     scaled = slope / np.maximum(core, 1e-6)[:, :, None, None]
-    combined = np.einsum("sl,slmc->smc", share, scaled**LEAD_NORM) ** (1 / LEAD_NORM)
+    # In a norm of high order even a small share of a loud lead is heard: here its weight goes in squared.
+    loud = weight**2 / np.maximum((weight**2).sum(axis=1, keepdims=True), 1e-12)
+    combined = np.einsum("sl,slmc->smc", loud, scaled**LEAD_NORM) ** (1 / LEAD_NORM)
     floor = np.sqrt((share * ratio**2).sum(axis=1))
     spread = floor[:, None] * np.concatenate([[1.0], np.full(m - 1, np.sqrt(2.0))])
     on, off = waves.qrs_edges(combined.reshape(-1, LENGTH), spread.ravel(), fraction=GLOBAL_QRS_FRACTION)
     rr_ms = np.repeat(np.nan_to_num(rhythm.rr_median_s, nan=0.8) * 1000, m)
-    p, p_ratio = _common_p(beat, on, rr_ms)
-    t, t_error, t_fall = _common_t(beat, on, off, p, rr_ms, noise)
+    t, t_error, t_fall = _common_t(beat, on, off, rr_ms, noise)
+    p, p_ratio = _common_p(beat, on, waves.p_reach_ms(rr_ms, on, t.off_ms))
     value = np.stack([on - p.on_ms, off - on, t.off_ms + GLOBAL_T_LATER_MS - on], axis=1).reshape(
         n_strips, m, 3
     )
@@ -217,11 +219,12 @@ def _measure(
     )
 
 
-def _common_p(beat: NDArray, on: NDArray, rr_ms: NDArray) -> tuple[PWave, NDArray[np.float64]]:
+def _common_p(beat: NDArray, on: NDArray, reach_ms: NDArray) -> tuple[PWave, NDArray[np.float64]]:
     """(P wave of (S·M,) from all leads' likelihoods, height over error (S,))."""
     n_strips, n_leads, m, _ = beat.shape
     by_lead = np.repeat(on.reshape(n_strips, 1, m), n_leads, axis=1)
-    project, energy = waves.p_projections(beat.reshape(-1, LENGTH), by_lead.ravel())
+    reach_by_lead = np.repeat(reach_ms.reshape(n_strips, 1, m), n_leads, axis=1)
+    project, energy = waves.p_projections(beat.reshape(-1, LENGTH), by_lead.ravel(), reach_by_lead.ravel())
     project = project.reshape(n_strips, n_leads, m, -1)
     error2 = ((project[:, :, 1:] - project[:, :, :1]) ** 2).mean(axis=2)  # (S, L, A)
     error2 = np.median(error2, axis=2)
@@ -230,13 +233,13 @@ def _common_p(beat: NDArray, on: NDArray, rr_ms: NDArray) -> tuple[PWave, NDArra
     total = np.einsum("sl,slm->sm", worth, energy.reshape(n_strips, n_leads, m)).ravel()
     strongest = (worth * project[:, :, 0].max(axis=2) ** 2).argmax(axis=1)
     lead = project[np.arange(n_strips), strongest].reshape(n_strips * m, -1)
-    p = waves.p_wave(lead, total, on, rr_ms, score=score)
+    p = waves.p_wave(lead, total, on, reach_ms, score=score)
     best = score.reshape(n_strips, m, -1)[:, 0].max(axis=1)
     return p, np.sqrt(best / n_leads)
 
 
 def _common_t(
-    beat: NDArray, on: NDArray, off: NDArray, p: PWave, rr_ms: NDArray, noise: NDArray
+    beat: NDArray, on: NDArray, off: NDArray, rr_ms: NDArray, noise: NDArray
 ) -> tuple[TWave, NDArray[np.float64], NDArray[np.float64]]:
     """(T wave of (S·M,) on the first principal component, its error and fall (S,))."""
     n_strips, n_leads, m, _ = beat.shape
@@ -245,7 +248,7 @@ def _common_t(
     smooth = smooth.reshape(beat.shape)
     off_of = off.reshape(n_strips, m)[:, 0]
     first = ZERO + np.rint((off_of + 72) * FS / 1000).astype(np.intp)
-    limit = np.minimum(rr_ms + p.on_ms - 24.0, 700.0).reshape(n_strips, m)[:, 0]
+    limit = waves.t_limit_ms(rr_ms, on).reshape(n_strips, m)[:, 0]
     last = ZERO + np.rint(limit * FS / 1000).astype(np.intp)
     column = np.arange(LENGTH)
     inside = (column >= first[:, None]) & (column <= np.maximum(last, first + 10)[:, None])
@@ -258,7 +261,7 @@ def _common_t(
     raw = np.einsum("sl,slmc->smc", direction, beat).reshape(-1, LENGTH)
     place = np.clip(ZERO + waves.onset_column(on)[:, None] + np.arange(-5, 0), 0, LENGTH - 1)
     pq = np.take_along_axis(raw, place, axis=1).mean(axis=1)
-    t = waves.t_wave(single, off, np.minimum(rr_ms + p.on_ms - 24.0, 700.0), pq, rr_ms)
+    t = waves.t_wave(single, off, waves.t_limit_ms(rr_ms, on), pq, rr_ms)
     fall = t.fall_mv.reshape(n_strips, m)
     usable = np.where(np.isfinite(fall), fall, 0.0)
     return t, np.sqrt(((usable[:, 1:] - usable[:, :1]) ** 2).mean(axis=1)), usable[:, 0]

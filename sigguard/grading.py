@@ -119,11 +119,12 @@ def judge(
     return Judgement(verdict, (*alarms, *reasons))
 
 
+LOOK_FIRST = "Look at the patient first"
+
+
 def _alarm_reasons(patient_first: Sequence[PatientFirst]) -> list[str]:
     texts = [
-        p.text or f"Look at the patient first: {p.pattern}"
-        if p.text or p.pattern
-        else "Look at the patient first."
+        p.text if p.text.startswith(LOOK_FIRST) else f"{LOOK_FIRST}: {p.text or p.pattern}"
         for p in patient_first[:_NAMED_AT_MOST]
     ]
     more = len(patient_first) - len(texts)

@@ -16,6 +16,7 @@ from scipy.ndimage import uniform_filter1d
 
 from sigguard import averaging, beats, waves
 from sigguard.averaging import Average, BeatStack
+from sigguard.beat_judge import shipped_judge
 from sigguard.features import FEATURE_NAMES, row_features
 from sigguard.filters import RowTransform, high_pass, low_pass, transform_rows
 from sigguard.noise import MAINS_HZ, fill_gaps
@@ -37,7 +38,10 @@ __all__ = [
 WAVE_BAND_HZ = (0.5, 35.0)  # 0.5 Hz forwards and backwards is within Kligfield et al. 2007 (0.67 Hz)
 CHUNK_ROWS = 96  # keeps the work of one pass within the cache and its memory flat
 MIN_P_MV, MIN_P_RATIO, MIN_P_EXPLAINED = 0.015, 4.0, 0.40
-STEADY_P_RATIO, STEADY_PR_MS = 3.0, 12.0  # a weaker P wave counts if all halves of the beats put it at one place
+STEADY_P_RATIO, STEADY_PR_MS = (
+    3.0,
+    12.0,
+)  # a weaker P wave counts if all halves of the beats put it at one place
 MIN_T_MV, MIN_T_RATIO = 0.03, 3.2
 SEEN_MV = 0.04  # a wave of this height would have been seen if three standard errors stay below it
 
@@ -202,8 +206,13 @@ class Prepared:
 def prepare(x_mv: NDArray[np.float64], fs_hz: float) -> Prepared:
     """Fill, transform, find beats, filter: (R, N) rows, NaN where missing."""
     filled, missing = fill_gaps(x_mv)
-    work = transform_rows(filled, fs_hz)
-    return Prepared(work, drop_in_gaps(beats.find_beats(work), missing, work), wave_band(work))
+    work = transform_rows(np.asarray(filled, dtype=np.float64), fs_hz)
+    return Prepared(work, drop_in_gaps(beats.find_beats(work, beat_chance), missing, work), wave_band(work))
+
+
+def beat_chance(candidates: NDArray[np.float64]) -> NDArray[np.float64]:
+    """The shipped judge's probability that each of (C, F) candidates is a beat."""
+    return shipped_judge().predict_proba(candidates)[:, 0]
 
 
 def wave_band(work: RowTransform) -> NDArray[np.float64]:
@@ -292,12 +301,13 @@ def mark_waves(mean: Average, rhythm: Rhythm) -> Marks:
     noise_all = noise[:, None] * np.concatenate([[1.0], np.full(m - 1, np.sqrt(2.0))])
     on, off = waves.qrs_edges(slope, noise_all.ravel())
     rr_ms = np.repeat(np.nan_to_num(rhythm.rr_median_s, nan=0.8) * 1000, m)
-    project, energy = waves.p_projections(beat, on)
-    p = waves.p_wave(project, energy, on, rr_ms)
     pq = _level(beat, on, -24.0, 0.0)
     st = _level(beat, off, *waves.ST_AFTER_MS) - pq
     smooth = uniform_filter1d(uniform_filter1d(beat, waves.T_SMOOTH, axis=1), waves.T_SMOOTH, axis=1)
-    t = waves.t_wave(smooth, off, np.minimum(rr_ms + p.on_ms - 24.0, 700.0), pq, rr_ms)
+    t = waves.t_wave(smooth, off, waves.t_limit_ms(rr_ms, on), pq, rr_ms)
+    reach = waves.p_reach_ms(rr_ms, on, t.off_ms)
+    project, energy = waves.p_projections(beat, on, reach)
+    p = waves.p_wave(project, energy, on, reach)
     value = np.stack([on - p.on_ms, off - on, t.off_ms - on, st], axis=1).reshape(n_rows, m, 4)
     return Marks(
         on.reshape(n_rows, m),

@@ -3,49 +3,36 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import cache
 from pathlib import Path
-from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from sigguard import __version__
 from sigguard.advice import advise
-from sigguard.blocks import Batch, SegmentPlan, batches, plan_segments, rows_of
+from sigguard.blocks import SegmentPlan, plan_segments
 from sigguard.electrodes import electrode_noise
 from sigguard.errors import UsageError
 from sigguard.features import FEATURE_NAMES
 from sigguard.findings import ElectrodeNoise, PatientFirst, Value
-from sigguard.global_values import GLOBAL_FEATURE_NAMES, analyse_global
+from sigguard.global_values import GLOBAL_FEATURE_NAMES
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
-from sigguard.measure import Analysis, analyse
 from sigguard.noise import MAINS_HZ
 from sigguard.patient_first import MARGIN_S, cut_findings, find_patient_first, join_findings
 from sigguard.profile import Profile, choose_profile, load_profile
 from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
-from sigguard.reliability import ReliabilityModel
+from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
 from sigguard.report.document import Report
 from sigguard.rhythm_shape import grid_samples
-from sigguard.segments import ABSENT, MEASUREMENTS, UNITS, Segments
-from sigguard.verdicts import fault_rows, judge_rows, limit_by_recording, silence_under, small_here
+from sigguard.segment_pass import Part, Progress, Source, joined_tables, measure_all, merge_beats
+from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS, UNITS, Segments
+from sigguard.verdicts import silence_under
 
-GLOBAL_MOST_S = 60.0  # longer recordings have too much change in them for one global value
 ALARM_BLOCK_S = 600.0
-MIN_BEAT_GAP_S = 0.2
-Progress = Callable[[float], None]
-
-
-class Source(Protocol):
-    """Anything whose samples can be read in stretches: an opened file, or a Recording in memory."""
-
-    @property
-    def info(self) -> RecordingInfo: ...
-
-    def read(self, start: int = 0, stop: int | None = None) -> NDArray[np.float64]: ...
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -169,10 +156,10 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
     info, model = source.info, shipped_model()
     profile = options.profile or load_profile(choose_profile(info.n_leads, info.duration_s))
     plan = plan_segments(info.n_samples, info.fs_hz, options.segment_s)
-    parts = _measure(source, plan, model, profile, options, progress)
+    parts = measure_all(source, plan, model, profile, options.mains_among_hz, progress)
     beats = [merge_beats([part.lead_beats[k] for part in parts], info.fs_hz) for k in range(info.n_leads)]
     alarms = _patient_first(source, beats)
-    segments = _silenced(_joined([part.segments for part in parts]), alarms)
+    segments = _silenced(joined_tables([part.segments for part in parts]), alarms)
     handed = _global_measurements(parts, info, plan)
     values, st_by_lead = combine_values(segments, handed, fridericia=options.fridericia)
     summaries = lead_summaries(segments)
@@ -206,175 +193,22 @@ PROCEDURE_NOTE = (
 )
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _Part:
-    """What one batch of segments gave."""
-
-    segments: Segments
-    lead_beats: list[NDArray[np.int64]]  # per lead, sample indices in the recording
-    common_beats: NDArray[np.int64] | None
-    global_value: NDArray[np.float64] | None  # (n_segments, 3)
-    global_bound: NDArray[np.float64] | None
-    global_reliable: NDArray[np.bool_] | None
-    global_absent: NDArray[np.int8] | None
-    lead_weight: NDArray[np.float64] | None  # (n_segments, n_leads)
-    residual_mv: NDArray[np.float32] | None  # (n_segments, n_leads, n)
-
-
-def _measure(
-    source: Source,
-    plan: SegmentPlan,
-    model: ReliabilityModel,
-    profile: Profile,
-    options: Options,
-    progress: Progress | None,
-) -> list[_Part]:
-    parts = []
-    for batch in batches(plan, source.info.n_leads):
-        block = source.read(batch.read_start, batch.read_stop)
-        parts.append(_measure_batch(source.info, plan, batch, block, model, profile, options))
-        if progress is not None:
-            progress((batch.first + batch.count) / len(plan))
-    return parts
-
-
-def _measure_batch(
-    info: RecordingInfo,
-    plan: SegmentPlan,
-    batch: Batch,
-    block_mv: NDArray[np.float64],
-    model: ReliabilityModel,
-    profile: Profile,
-    options: Options,
-) -> _Part:
-    n_leads, fs_hz = info.n_leads, info.fs_hz
-    rows = rows_of(batch, block_mv)
-    lead_index = np.tile(np.arange(n_leads), batch.count)
-    analysis = analyse(
-        rows,
-        fs_hz,
-        rails_mv=None if info.rails_mv is None else info.rails_mv[lead_index],
-        step_mv=None if info.step_mv is None else info.step_mv[lead_index],
-        margin=batch.margin,
-        mains_among_hz=options.mains_among_hz,
-    )
-    segments = _table(info, plan, batch, lead_index, analysis, model, profile)
-    at = (
-        np.rint(analysis.beat_s * fs_hz).astype(np.int64)
-        + plan.start[batch.first + analysis.beat_row // n_leads]
-    )
-    lead_beats = [at[analysis.beat_row % n_leads == k] for k in range(n_leads)]
-    strips = n_leads > 1 and info.duration_s <= GLOBAL_MOST_S
-    common = _global_part(rows, batch, analysis, model, profile, plan, fs_hz, n_leads) if strips else {}
-    residual = analysis.residual_mv.reshape(batch.count, n_leads, -1) if strips else None
-    return _Part(
-        segments,
-        lead_beats,
-        common.get("beats"),
-        common.get("value"),
-        common.get("bound"),
-        common.get("reliable"),
-        common.get("absent"),
-        common.get("weight"),
-        residual,
-    )
-
-
-def _table(
-    info: RecordingInfo,
-    plan: SegmentPlan,
-    batch: Batch,
-    lead_index: NDArray[np.intp],
-    analysis: Analysis,
-    model: ReliabilityModel,
-    profile: Profile,
-) -> Segments:
-    tolerance = tolerances(profile)
-    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerance)
-    reliable, limited = limit_by_recording(reliable, lead_index, info.fs_hz, info.band_hz)
-    absent = small_here(absent, reliable, analysis.value, info.n_leads)
-    which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
-    return Segments(
-        leads=info.leads,
-        feature_names=FEATURE_NAMES,
-        lead_index=lead_index.astype(np.int32),
-        start_s=plan.start[which] / info.fs_hz,
-        end_s=plan.stop[which] / info.fs_hz,
-        value=analysis.value,
-        score=score,
-        bound=bound,
-        reliable=reliable,
-        absent=absent,
-        grade=grade_rows(reliable, absent),
-        fault=fault_rows(model, analysis.features, fault_p, limited, batch.size / info.fs_hz),
-        features=analysis.features,
-    )
-
-
-def tolerances(profile: Profile) -> NDArray[np.float64]:
-    """(5,) tolerances in the order of MEASUREMENTS; the first is unused, rate is judged by beats."""
-    t = profile.tolerance
-    return np.array([np.nan, t.pr_ms, t.qrs_ms, t.qt_ms, t.st_mv])
-
-
-def _global_part(
-    rows: NDArray[np.float64],
-    batch: Batch,
-    analysis: Analysis,
-    model: ReliabilityModel,
-    profile: Profile,
-    plan: SegmentPlan,
-    fs_hz: float,
-    n_leads: int,
-) -> dict[str, NDArray]:
-    plain = batch.margin == (0, 0)
-    core = rows[:, batch.margin[0] : rows.shape[1] - batch.margin[1]]
-    found = analyse_global(
-        core.reshape(batch.count, n_leads, -1), fs_hz, prepared=analysis.prepared if plain else None
-    )
-    scores = model.score_global(found.features)
-    has = np.isfinite(found.value)
-    bound = model.bound_global(scores)
-    return {
-        "beats": np.sort(
-            np.rint(found.beat_s * fs_hz).astype(np.int64) + plan.start[batch.first + found.beat_strip]
-        ),
-        "value": found.value,
-        "bound": np.where(np.isfinite(bound) & has, bound, np.nan),
-        "reliable": model.reliable_global(scores, tolerances(profile)[1:4].tolist()) & has,
-        "absent": found.absent,
-        "weight": found.weight,
-    }
-
-
-def _joined(parts: Sequence[Segments]) -> Segments:
-    if len(parts) == 1:
-        return parts[0]
-    columns = [name for name in Segments.__dataclass_fields__ if name not in ("leads", "feature_names")]
-    joined: dict[str, Any] = {
-        name: np.concatenate([getattr(part, name) for part in parts]) for name in columns
-    }
-    return replace(parts[0], **joined)
-
-
 def _silenced(segments: Segments, alarms: Sequence[PatientFirst]) -> Segments:
     if not alarms:
         return segments
     stretches = [(a.start_s, a.end_s, a.pattern) for a in alarms]
     reliable = silence_under(segments.reliable, segments.start_s, segments.end_s, stretches)
-    return replace(segments, reliable=reliable, grade=grade_rows(reliable, segments.absent))
-
-
-def merge_beats(parts: Sequence[NDArray[np.int64]], fs_hz: float) -> NDArray[np.int64]:
-    """Beats of neighbouring segments put together; one found on both sides of a seam counts once."""
-    at = np.sort(np.concatenate([np.asarray(part, dtype=np.int64) for part in parts]))
-    if len(at) < 2:
-        return at
-    return at[np.diff(at, prepend=at[0] - int(fs_hz)) > MIN_BEAT_GAP_S * fs_hz]
+    # A rhythm that may kill is not to be read as noise: what the classifiers call by name is not named here.
+    fault = segments.fault.copy()
+    under = np.any(
+        [(segments.start_s < last) & (segments.end_s > first) for first, last, _ in stretches], axis=0
+    )
+    fault[np.ix_(under, [FAULTS.index(name) for name in LEARNED_FAULTS])] = 0.0
+    return replace(segments, reliable=reliable, fault=fault, grade=grade_rows(reliable, segments.absent))
 
 
 def _beats_over_leads(
-    parts: Sequence[_Part], lead_beats: Sequence[NDArray[np.int64]], info: RecordingInfo
+    parts: Sequence[Part], lead_beats: Sequence[NDArray[np.int64]], info: RecordingInfo
 ) -> NDArray[np.int64]:
     """Common beats where they were looked for, else those of the lead whose rate scores best at the time."""
     if info.n_leads == 1:
@@ -421,7 +255,7 @@ def _patient_first(source: Source, beats: Sequence[NDArray[np.int64]]) -> list[P
     return join_findings(found)
 
 
-def _electrodes(parts: Sequence[_Part], info: RecordingInfo) -> list[ElectrodeNoise]:
+def _electrodes(parts: Sequence[Part], info: RecordingInfo) -> list[ElectrodeNoise]:
     residual = [part.residual_mv for part in parts if part.residual_mv is not None]
     if not residual:
         return []
@@ -430,7 +264,7 @@ def _electrodes(parts: Sequence[_Part], info: RecordingInfo) -> list[ElectrodeNo
 
 
 def _global_measurements(
-    parts: Sequence[_Part], info: RecordingInfo, plan: SegmentPlan
+    parts: Sequence[Part], info: RecordingInfo, plan: SegmentPlan
 ) -> dict[str, Value] | None:
     """Global PR, QRS and QT of a short recording with several leads, over its segments."""
     if any(part.global_value is None for part in parts):

@@ -33,6 +33,7 @@ P_LOCAL = 7.0  # columns
 T_SMOOTH = 11  # columns, twice
 T_LIMB_MS = 330.0  # usual place of the limb that ends the T wave at 60/min
 LAST_LIMB = 0.55
+T_BEFORE_NEXT_MS = 60.0
 T_INWARD_MS = 20.0  # what the smoothing adds to the end
 ST_AFTER_MS = (40.0, 80.0)  # J + 60 ms, a mean over 40 ms about it
 
@@ -133,11 +134,25 @@ class PWave:
     loading: NDArray[np.floating]  # (R,) mV: projection on the best atom
 
 
-def p_projections(beat_mv: NDArray[np.float64], qrs_on_ms: NDArray[np.float64]) -> tuple[NDArray, NDArray]:
-    """((R, A) projections on the bumps, mV; (R,) energy of the window about its base, mV²), single precision."""
+def p_reach_ms(rr_ms: NDArray[np.float64], qrs_on_ms: NDArray[np.float64], t_off_ms: NDArray[np.float64]) -> NDArray:
+    """How far before the QRS onset a P wave may begin, (R,) ms: up to where the T wave before it has ended."""
+    by_t = rr_ms - (t_off_ms - qrs_on_ms) - 8.0
+    by_rate = 0.45 * rr_ms + 20.0
+    return np.clip(np.where(np.isfinite(by_t), by_t, by_rate), 110.0, np.minimum(by_rate + 60.0, 340.0))
+
+
+def p_projections(
+    beat_mv: NDArray[np.float64], qrs_on_ms: NDArray[np.float64], reach_ms: NDArray[np.float64]
+) -> tuple[NDArray, NDArray]:
+    """((R, A) projections on the bumps, mV; (R,) energy of the window about its base, mV²), single precision.
+
+    Before ``reach_ms`` the window is held at its value there, so that the T wave before it does not count.
+    """
     atoms = _bumps()[0]
     columns = ZERO + onset_column(qrs_on_ms)[:, None] + np.arange(-P_WINDOW + 1, 1) - P_GUARD
-    window = np.take_along_axis(beat_mv, np.clip(columns, 0, LENGTH - 1), axis=1).astype(np.float32)
+    open_from = ZERO + onset_column(qrs_on_ms) - np.rint(reach_ms * FS / 1000).astype(np.intp)
+    columns = np.clip(np.maximum(columns, open_from[:, None]), 0, LENGTH - 1)
+    window = np.take_along_axis(beat_mv, columns, axis=1).astype(np.float32)
     column = np.arange(P_WINDOW) - (P_WINDOW - 1) - P_GUARD
     base = np.linalg.qr(np.stack([np.ones(P_WINDOW), column / column.std()], axis=1))[0].astype(np.float32)
     free = window - (window @ base) @ base.T
@@ -153,7 +168,7 @@ def p_wave(
     project: NDArray[np.float32],
     energy: NDArray[np.float32],
     qrs_on_ms: NDArray[np.float64],
-    rr_ms: NDArray[np.float64],
+    reach_ms: NDArray[np.float64],
     *,
     score: NDArray[np.float32] | None = None,
 ) -> PWave:
@@ -166,8 +181,7 @@ def p_wave(
     _, on, off, tall = _bumps()
     q = onset_column(qrs_on_ms)
     score = project**2 if score is None else score
-    # At a fast rate the window reaches into the T wave before it.
-    reach = (np.minimum(0.45 * rr_ms + 20.0, 340.0) * FS / 1000).astype(np.float32)
+    reach = (reach_ms * FS / 1000).astype(np.float32)
     score = np.where(on[None, :] >= -reach[:, None], score, np.float32(0.0))
     best = score.max(axis=1)
     first = score.argmax(axis=1)
@@ -249,6 +263,11 @@ def t_wave(
         where_room(np.abs(y[rows, top] - foot)),
         where_room(rival),
     )
+
+
+def t_limit_ms(rr_ms: NDArray[np.float64], qrs_on_ms: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Where the search for the T wave ends, ms from the fiducial: short of the next QRS complex."""
+    return np.minimum(rr_ms + qrs_on_ms - T_BEFORE_NEXT_MS, 700.0)
 
 
 def _last_limb(

@@ -21,7 +21,8 @@ from sigguard.measure import analyse
 from sigguard.recording import RecordingInfo
 from sigguard.report.document import Report, load_schema
 from sigguard.report.table import segments_csv
-from sigguard.screening import merge_beats, shipped_model
+from sigguard.screening import shipped_model
+from sigguard.segment_pass import merge_beats
 from sigguard.segments import FAULTS, GRADES, MEASUREMENTS
 
 VALIDATOR = jsonschema.Draft202012Validator(load_schema())

@@ -17,7 +17,7 @@ from sigguard.simulate.recorded import PARTS, qrs_peak_to_peak_mv
 Array = NDArray[np.float64]
 
 STEPS_MV = (0.001, 0.0024, 0.0025, 0.005, 0.005, 0.01)  # converter steps of usual recorders (practice)
-PART_SHARE = (0.6, 0.25, 0.15)  # of real subjects to train, calibrate, test
+PART_SHARE = (0.5, 0.4, 0.1)  # of real subjects to train, calibrate, test
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -44,7 +44,7 @@ class Size:
     strips: tuple[int, int, int]
     cells: int
     shapes: tuple[Shape, Shape, Shape] = (Shape(), Shape(), Shape())
-    real_every: int = 4  # one chunk in so many uses real carriers, if there are any
+    real_every: int = 2  # one chunk in so many uses real carriers, if there are any
 
 
 SIZES = {

@@ -37,4 +37,6 @@ if __name__ == "__main__":
     for name, report in found.items():
         if report.verdict != "accept":
             sys.stdout.write(f"{name}: {report.verdict}: {' '.join(report.judgement.reasons)}\n")
-    sys.stdout.write(f"{dict(Counter(r.verdict for r in found.values()))}, patient first {sum(bool(r.patient_first) for r in found.values())}\n")
+    sys.stdout.write(
+        f"{dict(Counter(r.verdict for r in found.values()))}, patient first {sum(bool(r.patient_first) for r in found.values())}\n"
+    )

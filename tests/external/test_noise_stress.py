@@ -40,4 +40,6 @@ def test_noise_stress_records(open_data: Path) -> None:
 if __name__ == "__main__":
     for name in ("118e00", "118e12"):
         noisy, clean = shares_below_intervals(Path(sys.argv[1]) / "nstdb" / f"{name}.hea")
-        sys.stdout.write(f"{name}: below intervals {100 * noisy:.1f} % of 17 to 19 min, {100 * clean:.1f} % of the clean\n")
+        sys.stdout.write(
+            f"{name}: below intervals {100 * noisy:.1f} % of 17 to 19 min, {100 * clean:.1f} % of the clean\n"
+        )

@@ -2,13 +2,8 @@
 
 from __future__ import annotations
 
-import importlib
-import sys
-from pathlib import Path
-
 import pytest
 
-import sigguard
 from sigguard import resources
 from sigguard.errors import UsageError
 from sigguard.resources import resource_path
@@ -40,23 +35,20 @@ def test_only_shipped_files_are_found(kind, name):
 
 
 def test_an_installed_package_comes_first(tmp_path, monkeypatch):
-    installed = tmp_path / "_synthetic"
-    installed.mkdir()
-    (installed / "__init__.py").touch()
-    (installed / "training.toml").write_text("seed = 1\n")
-    try:
-        with monkeypatch.context() as patch:
-            patch.setattr(sigguard, "__path__", [*sigguard.__path__, str(tmp_path)])
-            patch.delitem(sys.modules, "sigguard._synthetic", raising=False)
-            importlib.invalidate_caches()
-            assert Path(resource_path("synthetic", "training.toml")) == installed / "training.toml"
-            assert load_recipe("training") == {"seed": 1}
-            with pytest.raises(UsageError, match="missing or unusable"):
-                training_recipe()
-    finally:
-        sys.modules.pop("sigguard._synthetic", None)
-        sigguard.__dict__.pop("_synthetic", None)
-        importlib.invalidate_caches()
+    package = tmp_path / "sigguard"
+    (package / "_synthetic").mkdir(parents=True)  # as in a wheel: data beside the modules, no module itself
+    installed = package / "_synthetic" / "training.toml"
+    installed.write_text("seed = 1\n")
+    (tmp_path / "synthetic").mkdir()
+    (tmp_path / "synthetic" / "training.toml").write_text("seed = 2\n")
+    with monkeypatch.context() as patch:
+        patch.setattr(resources, "_PACKAGE", package)
+        assert resource_path("synthetic", "training.toml") == installed
+        assert load_recipe("training") == {"seed": 1}
+        with pytest.raises(UsageError, match="missing or unusable"):
+            training_recipe()
+        installed.unlink()
+        assert load_recipe("training") == {"seed": 2}
     assert training_recipe().seed != 1
 
 

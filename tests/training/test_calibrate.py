@@ -100,7 +100,8 @@ def test_share_is_a_lower_limit_and_rises() -> None:
     for _ in range(10):
         score = rng.random(4000)
         right = rng.random(4000) < 0.5 + 0.5 * score
-        table = fit_share(score, right, np.zeros((0, 4000), dtype=bool))
+        settings = CalibrationSettings(window=200, confidence=0.9)
+        table = fit_share(score, right, np.zeros((0, 4000), dtype=bool), settings)
         grid = np.linspace(0.02, 1, 300)
         levels = table(grid)
         assert np.all(levels[1:] >= levels[:-1])
