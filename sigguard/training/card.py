@@ -81,6 +81,11 @@ def _data(facts: CardFacts) -> list[str]:
             "  University Electrocardiography Database 1.0.1 (Kalyakulina et al. 2020): Open Data Commons",
             "  Attribution Licence 1.0.",
         ]
+        out += [f"  Records to {part}: {', '.join(names)}." for part, names in facts.real_carriers.items()]
+    out += [
+        "- Beats come from the judge in `beats.npz`, grown before on simulated ECG with known beats (and the train",
+        "  part of the recorded noise where it is given): `python -m sigguard.training.beats --noise DIR`.",
+    ]
     low, high = facts.recipe.snr_db
     return [*out, f"- Signal-to-noise ratio {low:g} to {high:g} dB on the noise-stress definition.", ""]
 
