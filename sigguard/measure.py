@@ -111,17 +111,17 @@ def analyse(
     mains frequencies to choose from. Flat or empty rows
     give no beats, no values and finite descriptions of their flatness.
     """
-    x_mv = np.atleast_2d(np.asarray(x_mv, dtype=np.float64))
+    rows_mv: NDArray[np.float64] = np.atleast_2d(np.asarray(x_mv, dtype=np.float64))
     parts = [
         _analyse_chunk(
-            x_mv[i : i + CHUNK_ROWS],
+            rows_mv[i : i + CHUNK_ROWS],
             fs_hz,
             None if rails_mv is None else rails_mv[i : i + CHUNK_ROWS],
             None if step_mv is None else step_mv[i : i + CHUNK_ROWS],
             margin,
             mains_among_hz,
         )
-        for i in range(0, max(len(x_mv), 1), CHUNK_ROWS)
+        for i in range(0, max(len(rows_mv), 1), CHUNK_ROWS)
     ]
     if len(parts) == 1:
         return parts[0]

@@ -234,6 +234,12 @@ class ReliabilityModel:
         within[:, 0] = self.calibration.share[0](scores[:, 0]) >= PROMISE
         return within
 
+    def least_reliable_rate(self) -> float:
+        """The least score at which the rate counts as reliable; inf if none does."""
+        table = self.calibration.share[0]
+        good = table.edge[table.level >= PROMISE]
+        return float(good.min()) if len(good) else np.inf
+
     def absence_holds(self, scores: Array) -> NDArray[np.bool_]:
         """(n, 5) scores of rows that name a reason of absence → whether 95 % of such reasons stand."""
         return self.calibration.absences(scores) >= PROMISE

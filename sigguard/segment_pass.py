@@ -18,7 +18,7 @@ from sigguard.profile import Profile
 from sigguard.recording import RecordingInfo
 from sigguard.reliability import ReliabilityModel
 from sigguard.segments import Segments
-from sigguard.verdicts import fault_rows, judge_rows, limit_by_recording, small_here
+from sigguard.verdicts import agreeing_leads, fault_rows, judge_rows, limit_by_recording, small_here
 
 GLOBAL_MOST_S = 60.0  # longer recordings have too much change in them for one global value
 MIN_BEAT_GAP_S = 0.2
@@ -86,7 +86,6 @@ def _measure_batch(
         margin=batch.margin,
         mains_among_hz=mains_among_hz,
     )
-    segments = _table(info, plan, batch, lead_index, analysis, model, profile)
     at = (
         np.rint(analysis.beat_s * fs_hz).astype(np.int64)
         + plan.start[batch.first + analysis.beat_row // n_leads]
@@ -94,6 +93,7 @@ def _measure_batch(
     lead_beats = [at[analysis.beat_row % n_leads == k] for k in range(n_leads)]
     strips = n_leads > 1 and info.duration_s <= GLOBAL_MOST_S
     common = _global_part(rows, batch, analysis, model, profile, plan, fs_hz, n_leads) if strips else {}
+    segments = _table(info, plan, batch, lead_index, analysis, model, profile, common.get("agree"))
     residual = analysis.residual_mv.reshape(batch.count, n_leads, -1) if strips else None
     return Part(
         segments,
@@ -116,9 +116,10 @@ def _table(
     analysis: Analysis,
     model: ReliabilityModel,
     profile: Profile,
+    agree: NDArray[np.bool_] | None,
 ) -> Segments:
     tolerance = tolerances(profile)
-    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerance)
+    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerance, agree)
     reliable, limited = limit_by_recording(reliable, lead_index, info.fs_hz, info.band_hz)
     absent = small_here(absent, reliable, analysis.value, info.n_leads)
     which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
@@ -172,6 +173,7 @@ def _global_part(
         "reliable": model.reliable_global(scores, tolerances(profile)[1:4].tolist()) & has,
         "absent": found.absent,
         "weight": found.weight,
+        "agree": agreeing_leads(analysis, found.beat_strip, found.beat_s, n_leads, batch.size / fs_hz),
     }
 
 

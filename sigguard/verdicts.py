@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from sigguard.beats import MATCH_S
 from sigguard.features import FEATURE_NAMES
 from sigguard.measure import Analysis
 from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
@@ -12,6 +13,7 @@ from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS
 
 RATE, PR, QRS, QT, ST = range(len(MEASUREMENTS))
 NO_WAVE, TOO_SMALL_HERE = ABSENT.index("no-wave"), ABSENT.index("too-small-here")
+AGREEING = 4  # leads that come to the same beats by themselves; any limb lead follows from two others
 MIN_CLIPPED_S, MIN_FLAT_S = 0.05, 0.3
 MAINS_UV = 25.0  # peak; the hum of the stability clause of IEC 60601-2-51
 WEAK_UV = 150.0  # QRS peak to peak; 5 mm is the usual lower end (common practice), this is 1.5 mm
@@ -23,20 +25,73 @@ LOWEST_FS_HZ = {PR: 100.0, QRS: 100.0, QT: 80.0, ST: 80.0}
 
 
 def judge_rows(
-    model: ReliabilityModel, analysis: Analysis, tolerance: NDArray[np.float64]
+    model: ReliabilityModel,
+    analysis: Analysis,
+    tolerance: NDArray[np.float64],
+    agree: NDArray[np.bool_] | None = None,
 ) -> tuple[NDArray, NDArray, NDArray, NDArray, NDArray]:
     """(scores, bounds, reliable, absent, fault probabilities) of the (R,) rows of an analysis.
 
-    A bound that the calibration cannot give is NaN. A named absence stands only where the calibration
+    ``agree`` (n_strips, n_leads): see ``agreeing_leads``. A bound that the calibration cannot give is NaN. A named absence stands only where the calibration
     says that such names hold.
     """
     scores, fault_p = model.judge(analysis.features)
+    if agree is not None:
+        scores = lift_agreed_rate(model, scores, agree)
     has = np.isfinite(analysis.value)
     bound = model.bound(scores)
     bound = np.where(np.isfinite(bound) & has, bound, np.nan)
     reliable = model.reliable(scores, tolerance.tolist()) & has
     absent = np.where(model.absence_holds(scores) & ~has, analysis.absent, 0).astype(np.int8)
     return scores, bound, reliable, absent, fault_p
+
+
+def agreeing_leads(
+    analysis: Analysis,
+    common_strip: NDArray[np.intp],
+    common_s: NDArray[np.float64],
+    n_leads: int,
+    duration_s: float,
+) -> NDArray[np.bool_]:
+    """(n_strips, n_leads): the leads whose own beats are the common ones, each within 150 ms, edges aside.
+
+    A lead's own beats and the common ones are found apart; where several leads come to the same
+    list by themselves, that is evidence no single lead can give.
+    """
+    n_rows = len(analysis.value)
+    out = np.zeros(n_rows, dtype=bool)
+    for row in range(n_rows):
+        own = analysis.beat_s[analysis.beat_row == row]
+        common = common_s[common_strip == row // n_leads]
+        out[row] = len(own) > 1 and _all_near(own, common, duration_s) and _all_near(common, own, duration_s)
+    return out.reshape(-1, n_leads)
+
+
+def _all_near(some_s: NDArray[np.float64], others_s: NDArray[np.float64], duration_s: float) -> bool:
+    some_s = some_s[(some_s > MATCH_S) & (some_s < duration_s - MATCH_S)]
+    if not len(some_s):
+        return True
+    if not len(others_s):
+        return False
+    place = np.clip(np.searchsorted(others_s, some_s), 1, max(len(others_s) - 1, 1))
+    near = np.minimum(
+        np.abs(others_s[np.minimum(place, len(others_s) - 1)] - some_s), np.abs(others_s[place - 1] - some_s)
+    )
+    return bool(np.all(near <= MATCH_S))
+
+
+def lift_agreed_rate(
+    model: ReliabilityModel, scores: NDArray[np.float64], agree: NDArray[np.bool_]
+) -> NDArray[np.float64]:
+    """Scores (R, 5) in which the rate of agreeing leads is at least the least score that counts as reliable.
+
+    ``agree`` (n_strips, n_leads); lifted only where AGREEING or more leads of the strip agree.
+    """
+    least = model.least_reliable_rate()
+    lifted = agree & (agree.sum(axis=1, keepdims=True) >= AGREEING)
+    out = scores.copy()
+    out[:, RATE] = np.where(lifted.ravel(), np.maximum(out[:, RATE], least), out[:, RATE])
+    return out
 
 
 def small_here(

@@ -134,7 +134,9 @@ class PWave:
     loading: NDArray[np.floating]  # (R,) mV: projection on the best atom
 
 
-def p_reach_ms(rr_ms: NDArray[np.float64], qrs_on_ms: NDArray[np.float64], t_off_ms: NDArray[np.float64]) -> NDArray:
+def p_reach_ms(
+    rr_ms: NDArray[np.float64], qrs_on_ms: NDArray[np.float64], t_off_ms: NDArray[np.float64]
+) -> NDArray:
     """How far before the QRS onset a P wave may begin, (R,) ms: up to where the T wave before it has ended."""
     by_t = rr_ms - (t_off_ms - qrs_on_ms) - 8.0
     by_rate = 0.45 * rr_ms + 20.0

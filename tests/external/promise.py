@@ -28,6 +28,7 @@ from sigguard.simulate.disturbance import to_leads
 from sigguard.simulate.recorded import RECORDED_KINDS, NoiseBank, qrs_peak_to_peak_mv, snr_gain
 from sigguard.training.carriers import real_carrier
 from sigguard.training.labels import label_rows, label_values
+from sigguard.verdicts import agreeing_leads, lift_agreed_rate
 
 LEVELS_DB = (-6, 0, 6, 12, 18, 24)
 FS_HZ = 500.0
@@ -114,6 +115,41 @@ def strip_trial(
         counted = np.repeat(sound, len(value), axis=0) & labels.judged
         parts.append((np.full(len(value), number), kind, level, cell, counted, labels.right, reliable))
     return Trial(*(np.concatenate([np.asarray(p[i]) for p in parts]) for i in range(7)))
+
+
+def agreement_trial(
+    folder: Path, records: list[str], model: ReliabilityModel, *, draws: int, seed: int = 4
+) -> tuple[int, int, int]:
+    """(rate calls in 12-lead strips with noise at every electrode, wrong ones, calls that rest on agreement alone)."""
+    rng = np.random.default_rng(seed)
+    bank = NoiseBank(folder / "nstdb", "test")
+    called = wrong = alone = 0
+    for name in records:
+        clean_mv = real_carrier(folder / "ludb", name).signal_mv
+        clean = analyse(clean_mv, FS_HZ)
+        sizes = [
+            qrs_peak_to_peak_mv(clean_mv[k], clean.beat_s[clean.beat_row == k], FS_HZ)
+            for k in range(len(clean_mv))
+        ]
+        size = float(np.nanmedian(sizes)) if np.isfinite(sizes).any() else np.nan
+        if not size > 0:
+            continue
+        for name_of in RECORDED_KINDS:
+            for snr_db in LEVELS_DB:
+                for _ in range(draws):
+                    noise = np.stack([bank.draw(rng, name_of, n_samples=N, fs_hz=FS_HZ) for _ in range(9)])
+                    gain = np.array([snr_gain(size, row, snr_db, FS_HZ) for row in noise])
+                    strip = clean_mv + to_leads(gain[:, None] * noise)
+                    found, common = analyse(strip, FS_HZ), analyse_global(strip[None], FS_HZ)
+                    agree = agreeing_leads(found, common.beat_strip, common.beat_s, len(strip), N / FS_HZ)
+                    scores = model.score(found.features)
+                    lifted = lift_agreed_rate(model, scores, agree)
+                    before = model.reliable(scores)[:, 0]
+                    after = model.reliable(lifted)[:, 0] & np.isfinite(found.value[:, 0])
+                    right = label_rows(clean, found, N / FS_HZ).right[:, 0]
+                    called, wrong = called + int(after.sum()), wrong + int((after & ~right).sum())
+                    alone += int((after & ~before).sum())
+    return called, wrong, alone
 
 
 @dataclass(frozen=True, slots=True)
@@ -207,6 +243,11 @@ def main() -> None:
         strips = strip_trial(arguments.folder, records, model, draws=arguments.draws)
         sys.stdout.write(f"{len(strips.cell)} strips of 12 leads, noise at every electrode\n")
         sys.stdout.write(table(answers(strips, GLOBAL_MEASUREMENTS, draws=arguments.draws)) + "\n")
+        called, wrong, alone = agreement_trial(arguments.folder, records, model, draws=1)
+        sys.stdout.write(
+            f"rate in strips with noise at every electrode: {called} lead segments called reliable, {wrong} wrong "
+            f"({100 * wrong / max(called, 1):.2f} %), {alone} of them by the agreement of leads\n"
+        )
 
 
 if __name__ == "__main__":

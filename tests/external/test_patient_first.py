@@ -59,7 +59,9 @@ def false_segments(path: Path) -> tuple[int, int]:
         note = wfdb.rdann(str(path.with_suffix("")), "atr")
     due = np.zeros(n_s, dtype=bool)
     changes = [
-        (s / fs_hz, t.strip("\x00")) for s, t in zip(note.sample, note.aux_note, strict=True) if t.startswith("(")
+        (s / fs_hz, t.strip("\x00"))
+        for s, t in zip(note.sample, note.aux_note, strict=True)
+        if t.startswith("(")
     ]
     for (start, rhythm), (stop, _) in zip(changes, [*changes[1:], (n_s, "")], strict=True):
         if rhythm in TRUE_RHYTHMS:
