@@ -215,9 +215,24 @@ def beat_chance(candidates: NDArray[np.float64]) -> NDArray[np.float64]:
     return shipped_judge().predict_proba(candidates)[:, 0]
 
 
-def wave_band(work: RowTransform) -> NDArray[np.float64]:
+def wave_band(work: RowTransform, upper_hz: float = WAVE_BAND_HZ[1]) -> NDArray[np.float64]:
     """Rows in which the waves are measured, (R, n) at the work rate."""
-    return work.band(high_pass(work.freq_hz, WAVE_BAND_HZ[0]) * low_pass(work.freq_hz, WAVE_BAND_HZ[1], 5))
+    return work.band(high_pass(work.freq_hz, WAVE_BAND_HZ[0]) * low_pass(work.freq_hz, upper_hz, 5))
+
+
+def averaged_beats(
+    x_mv: NDArray[np.float64], fs_hz: float, *, upper_hz: float = 110.0
+) -> NDArray[np.float64]:
+    """The averaged beat of each of (R, N) rows in a wider band than the marks are read in, (R, LENGTH) mV at FS.
+
+    For showing and comparing shapes: small notches of the QRS complex live above 35 Hz.
+    """
+    ready = prepare(np.atleast_2d(x_mv), fs_hz)
+    stack = averaging.stack_beats(
+        wave_band(ready.work, upper_hz), ready.found.row, ready.found.at, ready.found.likeness
+    )
+    mean, _ = average_rows(stack, averaging.dominant(stack))
+    return mean.beat_mv[:, 0]
 
 
 def between(found: beats.Beats, start: float, stop: float) -> beats.Beats:

@@ -16,6 +16,7 @@ NO_WAVE, TOO_SMALL_HERE = ABSENT.index("no-wave"), ABSENT.index("too-small-here"
 AGREEING = 4  # leads that come to the same beats by themselves; any limb lead follows from two others
 MIN_CLIPPED_S, MIN_FLAT_S = 0.05, 0.3
 MAINS_UV = 25.0  # peak; the hum of the stability clause of IEC 60601-2-51
+WANDER_UV = 1000.0  # range of the baseline, 10 mm; twice the drift of the stability clause of IEC 60601-2-51
 WEAK_UV = 150.0  # QRS peak to peak; 5 mm is the usual lower end (common practice), this is 1.5 mm
 HIGH_PASS_TAKES_ST_HZ = (
     0.1  # a 0.5 Hz analogue high-pass distorts ST, 0.05 Hz is asked for (Kligfield et al. 2007)
@@ -149,6 +150,8 @@ def fault_rows(
     # Hum is measured outright: what a recorder must put up with in a stability test is called by name.
     hum = np.hypot(column("mains_uv"), column("mains_harmonics_uv")) >= MAINS_UV
     out[:, FAULTS.index("mains")] = np.maximum(out[:, FAULTS.index("mains")], hum)
+    drift = column("wander_range_uv") >= WANDER_UV
+    out[:, FAULTS.index("wander")] = np.maximum(out[:, FAULTS.index("wander")], drift)
     height = column("qrs_pp_uv")
     out[:, FAULTS.index("weak")] = (height > 0) & (height < WEAK_UV)
     out[:, FAULTS.index("narrow-band")] = limited

@@ -129,7 +129,7 @@ def draw_scene(
         breath_turn_rad=float(rng.uniform(0, 0.1)),
         beat_jitter=float(rng.uniform(0.0, 0.025)),
         atrial_bpm=_draw_atrial_bpm(rng, rhythm),
-        atrial_mv=float(np.exp(rng.uniform(np.log(0.015), np.log(0.15))))
+        atrial_mv=float(np.exp(rng.uniform(np.log(0.01), np.log(0.07))))
         * (2.0 if rhythm == "atrial-flutter" else 1),
         af_irregularity=float(rng.uniform(0.12, 0.26)),
         ectopic_share=float(rng.uniform(0.08, 0.5)),

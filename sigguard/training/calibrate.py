@@ -8,7 +8,8 @@ chapter 7, from memory). Neighbours that break the order "a better score, a smal
 
 The promise must hold for each kind of noise and not only for their mixture. So the table learned from all
 rows is then asked to each kind: its scores are taken for worse, by one step on the logit scale after
-another, until the rows of the kind keep to their bounds, all together and in each third by score. The kind that needs most decides.
+another, until the rows of the kind keep to their bounds, all together and in each third by score. The kind
+that needs most decides. That a wave is named absent is asked for 90 % at any score and 95 % over all so named.
 """
 
 from __future__ import annotations
@@ -21,7 +22,7 @@ from numpy.typing import NDArray
 from scipy.special import expit, logit
 from scipy.stats import beta, binom
 
-from sigguard.reliability import PROMISE, Calibration, StepTable
+from sigguard.reliability import LOCAL, PROMISE, Calibration, StepTable
 from sigguard.training.labels import Labels
 
 Array = NDArray[np.float64]
@@ -29,16 +30,18 @@ Statistic = Callable[[Array], float]
 _FINENESS = 12  # pieces to a window
 _LEAST = 1e-9
 _SHIFTS = np.arange(0.0, 6.01, 0.05)  # steps by which a score may be taken for worse, on the logit scale
-_THIRD, _FEW = 100, 30  # rows that make a third, too few to speak below
+_ENOUGH, _THIRD, _FEW = 150, 100, 30  # rows that can prove 95 %, that make a third, too few to speak below
 
 
 @dataclass(frozen=True, slots=True)
 class CalibrationSettings:
     """window: rows a statistic rests on before pooling; confidence: that it is on the safe side;
+    local: the share of named absences that must hold at each single score;
     min_group: a kind of noise with fewer rows is judged together with the rest only."""
 
     window: int = 400
     confidence: float = 0.75
+    local: float = LOCAL
     min_group: int = 60
 
 
@@ -125,8 +128,13 @@ def fit_share(
     right: NDArray[np.bool_],
     groups: NDArray[np.bool_],
     settings: CalibrationSettings | None = None,
+    *,
+    asked: float = PROMISE,
 ) -> StepTable:
-    """Score → lower confidence limit of the share of right rows; kinds are asked at the promised share."""
+    """Score → lower confidence limit of the share of right rows.
+
+    Rows whose limit reaches ``asked`` are those that will be called: they are asked kind by kind.
+    """
     settings = settings or CalibrationSettings()
     if not len(score):
         return StepTable(edge=np.zeros(0), level=np.zeros(0), below=0.0)
@@ -140,7 +148,7 @@ def fit_share(
     table = StepTable(edge=edge, level=level, below=0.0)
 
     def kept(candidate: StepTable, rows: NDArray[np.bool_]) -> NDArray[np.bool_]:
-        called = candidate(score[rows]) >= PROMISE
+        called = candidate(score[rows]) >= asked
         order = np.argsort(score[rows][called], kind="stable")
         return right[rows][called][order]
 
@@ -161,7 +169,11 @@ def calibrate(
         named = labels.judged[:, k] & ~labels.valued[:, k]
         bound.append(fit_bound(scores[valued, k], labels.error[valued, k], groups[:, valued], settings))
         share.append(fit_share(scores[valued, k], labels.right[valued, k], groups[:, valued], settings))
-        absent.append(fit_share(scores[named, k], labels.right[named, k], groups[:, named], settings))
+        absent.append(
+            fit_share(
+                scores[named, k], labels.right[named, k], groups[:, named], settings, asked=settings.local
+            )
+        )
     return Calibration(bound=tuple(bound), share=tuple(share), absent=tuple(absent))
 
 
@@ -175,21 +187,23 @@ def _safe_for_each(
     for steps in _SHIFTS:
         candidate = shifted(table, steps) if steps else table
         asked = [rows for rows in groups if rows.sum() >= settings.min_group]
-        if all(_keeps_promise(kept(candidate, rows)) for rows in asked):
+        if all(_keeps_promise(kept(candidate, rows), settings.confidence) for rows in asked):
             return candidate
     return StepTable(edge=np.zeros(0), level=np.zeros(0), below=table.below)
 
 
-def _keeps_promise(kept: NDArray[np.bool_]) -> bool:
+def _keeps_promise(kept: NDArray[np.bool_], confidence: float) -> bool:
     """Whether (n,) rows of one kind, ordered by score, keep to it: all together, and in each third.
 
-    The table already carries its allowance, so here the shares themselves are asked to reach 95 %. A
-    handful of rows says nothing.
+    Together the lower limit of their share must reach 95 %. A third, or few rows, cannot prove so
+    much; there the share itself must. A handful says nothing.
     """
     n = len(kept)
     if n < _FEW:
         return True
-    share = float(np.mean(kept))
+    share = (
+        lower_share(kept.astype(np.float64), confidence=confidence) if n >= _ENOUGH else float(np.mean(kept))
+    )
     parts = np.array_split(kept, 3) if n >= 3 * _THIRD else []
     return share >= PROMISE and all(np.mean(part) >= PROMISE for part in parts)
 

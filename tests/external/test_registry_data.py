@@ -18,7 +18,7 @@ from scipy.signal import butter, sosfiltfilt
 
 from sigguard import Recording, check, open_recording
 from sigguard.global_values import analyse_global
-from sigguard.measure import WAVE_BAND_HZ, analyse
+from sigguard.measure import WAVE_BAND_HZ, analyse, averaged_beats
 from sigguard.waves import FS, LENGTH, ZERO
 
 
@@ -59,16 +59,13 @@ def in_our_band(x_mv: np.ndarray) -> np.ndarray:
 
 
 def test_our_averaged_beat_is_the_recorders():
-    """Correlation per lead from P to T at the lag that fits best: 0.994 up in the same band; 0.954 up outright.
-
-    What is lost outright is the notch of a 0.3 mV complex in aVL (0.954) and III (0.970), above 35 Hz.
-    """
-    ours = analyse(rhythm_mv(), 1000.0).median_beat_mv.astype(float)
+    """Correlation per lead from P to T at the lag that fits best: 0.98 in each lead outright (0.982 measured in
+    aVL, whose small notches live above 35 Hz, 0.99 and more elsewhere); 0.99 in the band the marks are read in."""
     t_ours = (np.arange(LENGTH) - ZERO) / FS
     t_theirs = (np.arange(1200) - 500) / 1000.0
-    core = (t_theirs > -0.25) & (t_theirs < 0.38)
+    core = (t_theirs > -0.25) & (t_theirs < 0.45)
 
-    def fits(theirs: np.ndarray) -> np.ndarray:
+    def fits(ours: np.ndarray, theirs: np.ndarray) -> np.ndarray:
         best = np.zeros(12)
         for k in range(12):
             fine = CubicSpline(t_ours, ours[k])
@@ -76,9 +73,9 @@ def test_our_averaged_beat_is_the_recorders():
                 best[k] = max(best[k], np.corrcoef(fine(t_theirs[core] + lag), theirs[k, core])[0, 1])
         return best
 
-    outright = fits(recorders_median_mv())
-    assert np.all(outright >= 0.94) and np.sum(outright >= 0.98) >= 10, outright.round(4)
-    same_band = fits(in_our_band(recorders_median_mv()))
+    outright = fits(averaged_beats(rhythm_mv(), 1000.0), recorders_median_mv())
+    assert np.all(outright >= 0.98), outright.round(4)
+    same_band = fits(analyse(rhythm_mv(), 1000.0).median_beat_mv.astype(float), in_our_band(recorders_median_mv()))
     assert np.all(same_band >= 0.99), same_band.round(4)
 
 
