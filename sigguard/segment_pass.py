@@ -18,7 +18,15 @@ from sigguard.profile import Profile
 from sigguard.recording import RecordingInfo
 from sigguard.reliability import ReliabilityModel
 from sigguard.segments import Segments
-from sigguard.verdicts import agreeing_leads, fault_rows, judge_rows, limit_by_recording, small_here
+from sigguard.verdicts import (
+    NO_WAVE,
+    agreeing_leads,
+    fault_rows,
+    hardly_there,
+    judge_rows,
+    limit_by_recording,
+    small_here,
+)
 
 GLOBAL_MOST_S = 60.0  # longer recordings have too much change in them for one global value
 MIN_BEAT_GAP_S = 0.2
@@ -121,7 +129,13 @@ def _table(
     tolerance = tolerances(profile)
     score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerance, agree)
     reliable, limited = limit_by_recording(reliable, lead_index, info.fs_hz, info.band_hz)
-    absent = small_here(absent, reliable, analysis.value, info.n_leads)
+    hidden = hardly_there(analysis.features, reliable)
+    named = absent
+    absent = small_here(np.where(hidden, NO_WAVE, named), reliable, analysis.value, info.n_leads)
+    # What is small here without being seen elsewhere is not called absent: it was merely not trusted.
+    absent = np.where(hidden & (absent == NO_WAVE), named, absent).astype(np.int8)
+    value = np.where(absent > 0, np.nan, analysis.value)
+    bound = np.where(absent > 0, np.nan, bound)
     which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
     return Segments(
         leads=info.leads,
@@ -129,7 +143,7 @@ def _table(
         lead_index=lead_index.astype(np.int32),
         start_s=plan.start[which] / info.fs_hz,
         end_s=plan.stop[which] / info.fs_hz,
-        value=analysis.value,
+        value=value,
         score=score,
         bound=bound,
         reliable=reliable,

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from sigguard.beats import MATCH_S
 from sigguard.features import FEATURE_NAMES
-from sigguard.measure import Analysis
+from sigguard.measure import SEEN_MV, Analysis
 from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
 from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS
 
@@ -17,6 +17,7 @@ AGREEING = 4  # leads that come to the same beats by themselves; any limb lead f
 MIN_CLIPPED_S, MIN_FLAT_S = 0.05, 0.3
 MAINS_UV = 25.0  # peak; the hum of the stability clause of IEC 60601-2-51
 WANDER_UV = 1000.0  # range of the baseline, 10 mm; twice the drift of the stability clause of IEC 60601-2-51
+SMALL_UV = 50.0  # half a millimetre: nobody reads an interval off such a wave (common practice)
 WEAK_UV = 150.0  # QRS peak to peak; 5 mm is the usual lower end (common practice), this is 1.5 mm
 HIGH_PASS_TAKES_ST_HZ = (
     0.1  # a 0.5 Hz analogue high-pass distorts ST, 0.05 Hz is asked for (Kligfield et al. 2007)
@@ -105,6 +106,20 @@ def small_here(
     seen = (reliable & np.isfinite(value)).reshape(-1, n_leads, len(MEASUREMENTS)).any(axis=1)
     elsewhere = np.repeat(seen, n_leads, axis=0)
     return np.where((absent == NO_WAVE) & elsewhere, TOO_SMALL_HERE, absent).astype(np.int8)
+
+
+def hardly_there(features: NDArray[np.float32], reliable: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """(R, 5): PR and QT that cannot be trusted because the wave is under half a millimetre, though it is quiet.
+
+    Quiet enough that three standard errors of the wave's height stay below SEEN_MV: a wave of usual
+    size would have been seen.
+    """
+    out = np.zeros(reliable.shape, dtype=bool)
+    for k, height, error in ((PR, "p_height_uv", "p_error_uv"), (QT, "t_fall_uv", "t_error_uv")):
+        size = features[:, FEATURE_NAMES.index(height)].astype(np.float64)
+        unsure = 3 * features[:, FEATURE_NAMES.index(error)].astype(np.float64)
+        out[:, k] = ~reliable[:, k] & (size < SMALL_UV) & (unsure < SEEN_MV * 1e3)
+    return out
 
 
 def limit_by_recording(

@@ -163,6 +163,7 @@ def calibrate(
     A bound is stated beside a value, so it is learned from the rows that give one; a row that says
     "absent" makes another claim, which has a table of its own.
     """
+    settings = settings or CalibrationSettings()
     bound, share, absent = [], [], []
     for k in range(scores.shape[1]):
         valued = labels.judged[:, k] & labels.valued[:, k]
