@@ -188,8 +188,9 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
 
 
 PROCEDURE_NOTE = (
-    "Apart from any disturbance, the measuring procedure itself differs from a careful hand; "
-    "by how much is measured in models/CARD.md."
+    "Apart from any disturbance, the measuring procedure itself differs from a careful hand. On open recordings marked "
+    "by hand, none of which it was fitted to, the standard deviation of the difference is about 9 ms for PR, 12 ms for "
+    "QRS and 20 to 30 ms for QT over all leads."
 )
 
 

@@ -12,9 +12,15 @@ from sigguard.reliability import LEARNED_FAULTS
 from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS
 from sigguard.verdicts import (
     HIGH_PASS_TAKES_ST_HZ,
+    MAINS_UV,
+    SMALL_UV,
+    WANDER_UV,
     WEAK_UV,
+    agreeing_leads,
     fault_rows,
+    hardly_there,
     judge_rows,
+    lift_agreed_rate,
     limit_by_recording,
     silence_under,
     small_here,
@@ -172,3 +178,55 @@ def test_a_wide_fast_rhythm_can_still_be_measured():
         np.ones((2, 5), bool), np.array([0.0, 10.0]), np.array([10.0, 20.0]), [(0.0, 20.0, "wide-fast")]
     )
     assert out.all()
+
+
+def beats_of(lists):
+    """An analysis that knows beats only, from one list of seconds a row."""
+    row = np.repeat(np.arange(len(lists)), [len(x) for x in lists])
+    return SimpleNamespace(value=np.zeros((len(lists), 5)), beat_row=row, beat_s=np.concatenate(lists))
+
+
+def test_leads_agree_when_their_beats_are_the_common_ones():
+    common = np.array([0.5, 1.5, 2.5, 3.5])
+    late, edge = (
+        common + 0.14,
+        np.array([0.5, 1.5, 2.5, 3.5, 9.95]),
+    )  # a beat at the very edge may fall either way
+    missed, invented, off = common[[0, 1, 3]], np.append(common, 5.0), common + [0, 0.2, 0, 0]
+    lists = [common, late, edge, missed, invented, off]
+    agree = agreeing_leads(beats_of(lists), np.zeros(4, int), common, len(lists), 10.0)
+    np.testing.assert_array_equal(agree, [[True, True, True, False, False, False]])
+    assert not agreeing_leads(
+        beats_of([np.zeros(0), np.array([1.0])]), np.zeros(0, int), np.zeros(0), 2, 10.0
+    ).any()
+
+
+def test_agreement_lifts_the_rate_only_among_four_leads_or_more():
+    model = SimpleNamespace(least_reliable_rate=lambda: 0.96)
+    scores = np.full((5, 5), 0.5)
+    four = lift_agreed_rate(model, scores, np.array([[True, True, True, True, False]]))
+    np.testing.assert_array_equal(four[:, RATE], [0.96, 0.96, 0.96, 0.96, 0.5])
+    np.testing.assert_array_equal(four[:, 1:], scores[:, 1:])
+    three = lift_agreed_rate(model, scores, np.array([[True, True, True, False, False]]))
+    np.testing.assert_array_equal(three, scores)
+
+
+def test_a_wave_under_half_a_millimetre_is_hardly_there_only_where_it_is_quiet():
+    features = np.zeros((4, len(FEATURE_NAMES)), np.float32)
+    p, p_error = FEATURE_NAMES.index("p_height_uv"), FEATURE_NAMES.index("p_error_uv")
+    features[:, p] = [SMALL_UV - 1, SMALL_UV + 1, SMALL_UV - 1, SMALL_UV - 1]
+    features[:, p_error] = [5, 5, 30, 5]
+    features[:, FEATURE_NAMES.index("t_fall_uv")] = 300
+    reliable = np.zeros((4, 5), bool)
+    reliable[3, PR] = True
+    np.testing.assert_array_equal(hardly_there(features, reliable)[:, PR], [True, False, False, False])
+    assert not hardly_there(features, reliable)[:, [RATE, QRS, QT, ST]].any()
+
+
+def test_hum_and_drift_are_named_outright():
+    features = np.zeros((3, len(FEATURE_NAMES)), np.float32)
+    features[1, FEATURE_NAMES.index("mains_uv")] = MAINS_UV + 1
+    features[2, FEATURE_NAMES.index("wander_range_uv")] = WANDER_UV + 1
+    found = fault_rows(MadeUp(np.zeros((3, 5))), features, np.zeros((3, 4)), np.zeros(3, bool), 10.0)
+    np.testing.assert_array_equal(found[:, FAULTS.index("mains")], [0, 1, 0])
+    np.testing.assert_array_equal(found[:, FAULTS.index("wander")], [0, 0, 1])

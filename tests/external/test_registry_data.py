@@ -75,7 +75,9 @@ def test_our_averaged_beat_is_the_recorders():
 
     outright = fits(averaged_beats(rhythm_mv(), 1000.0), recorders_median_mv())
     assert np.all(outright >= 0.98), outright.round(4)
-    same_band = fits(analyse(rhythm_mv(), 1000.0).median_beat_mv.astype(float), in_our_band(recorders_median_mv()))
+    same_band = fits(
+        analyse(rhythm_mv(), 1000.0).median_beat_mv.astype(float), in_our_band(recorders_median_mv())
+    )
     assert np.all(same_band >= 0.99), same_band.round(4)
 
 
