@@ -121,14 +121,14 @@ def test_any_block_gives_the_same_table(block_rows):
 
 @pytest.mark.parametrize("block_rows", [2, 9])
 def test_any_block_gives_the_same_report(monkeypatch, block_rows):
-    from sigguard import blocks, screening
+    from sigguard import blocks, screening, segment_pass
     from sigguard.recording import Recording
 
     x, fs_hz = two_minutes()
     recording = Recording(x, fs_hz, ["II", "V2"])
     usual = screening.check(recording).segments
     monkeypatch.setattr(
-        screening, "batches", lambda plan, n_leads: blocks.batches(plan, n_leads, block_rows=block_rows)
+        segment_pass, "batches", lambda plan, n_leads: blocks.batches(plan, n_leads, block_rows=block_rows)
     )
     other = screening.check(recording).segments
     np.testing.assert_array_equal(other.start_s, usual.start_s)

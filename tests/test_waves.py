@@ -66,8 +66,10 @@ def edges(*beats: np.ndarray, noise: float = 0.0) -> tuple[np.ndarray, np.ndarra
 
 def p_of(*beats: np.ndarray, on_ms: float = -44.0, rr_ms: float = 900.0) -> waves.PWave:
     on = np.full(len(beats), on_ms)
-    project, energy = waves.p_projections(np.stack(beats), on)
-    return waves.p_wave(project, energy, on, np.full(len(beats), rr_ms))
+    # No T wave known before this one: how far back a P wave may lie follows from the rate.
+    reach = waves.p_reach_ms(np.full(len(beats), rr_ms), on, np.full(len(beats), np.nan))
+    project, energy = waves.p_projections(np.stack(beats), on, reach)
+    return waves.p_wave(project, energy, on, reach)
 
 
 def t_of(*beats: np.ndarray, limit_ms: float = 600.0, rr_ms: float = 900.0) -> waves.TWave:

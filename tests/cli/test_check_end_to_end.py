@@ -281,8 +281,10 @@ def test_demo_fibrillation_comes_first_and_is_no_fault(demo_reports):
 
 
 # How far the procedure itself may be from the truth of the simulator, ms: mean and two SDs of the IEC 60601-2-25
-# limits for PR and QRS (from memory), and half of that for QT, whose limit there is very wide.
-PROCEDURE_MS = {"pr": 30.0, "qrs": 30.0, "qt": 42.5}
+# limits for PR (from memory), and half of that for QT, whose limit there is very wide. For QRS 20 ms about the 28 ms
+# by which the simulator's edges (3 % of the wave's own peak) lie inside the procedure's in the median over its strips;
+# against hand marks the procedure is 5 ms shorter (tests.external.test_waves_ludb).
+PROCEDURE_MS = {"pr": 30.0, "qrs": 48.0, "qt": 42.5}
 
 
 def test_demo_what_can_be_trusted_is_near_the_truth(demo_reports):

@@ -115,6 +115,8 @@ def test_ctrl_c_leaves_whole_files_only(environment, recordings, tmp_path, jobs)
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         start_new_session=True,
+        # Whoever runs the tests in the background has Ctrl-C ignored, and a child would inherit that.
+        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL),  # noqa: PLW1509
     )
     give_up = time.monotonic() + 40
     while not (tmp_path / "r1.begun").exists() and time.monotonic() < give_up:

@@ -9,6 +9,7 @@ from sigguard.errors import ModelError, UsageError
 from sigguard.reliability import ReliabilityModel
 from sigguard.simulate.recipes import training_recipe
 from sigguard.training import train
+from sigguard.training.calibrate import CalibrationSettings
 from sigguard.training.corpus import Shape, Size, build_corpus, plan_chunks
 from sigguard.training.evaluate import evaluate_rows
 from sigguard.training.fit import SMALL, Task, fit_all
@@ -58,7 +59,8 @@ def test_promise_holds_on_the_untouched_part() -> None:
     size = Size(rows=(6, 6, 6), strips=(0, 0, 0), cells=0, shapes=3 * (Shape(4, 4, 8),))
     recipe = training_recipe()
     corpus = build_corpus(recipe, FAKE, plan_chunks(recipe, size, seed=11))
-    arrays, _ = learn(corpus, FAKE, seed=11, grid=(SMALL,))
+    settings = CalibrationSettings(window=200, confidence=0.9)  # for so small a corpus
+    arrays, _ = learn(corpus, FAKE, seed=11, grid=(SMALL,), settings=settings)
     model = ReliabilityModel.from_arrays(arrays)
     results = evaluate_rows(model, corpus.rows.pick(corpus.rows.part == 2), seed=11)
     called = [r for r in results if r.noise == "all" and r.n_reliable >= 100]
