@@ -170,13 +170,17 @@ def test_enough_of_the_clean_records_are_called_reliable(untouched: Half, name: 
     assert untouched.trusted_share(name) >= least
 
 
+# One small error fewer moves the 95 % point of some forty by a fraction of a millisecond.
+SAMPLING_MS = 1.0
+
+
 def test_reliable_ones_are_no_worse_than_all(untouched: Half):
     """What the model leaves out must be the worse part, not a random part. Measured on this half with 50 records:
     PR 0 ± 9, QRS -5 ± 10, QT -3 ± 18 ms where called reliable; -1 ± 9, -4 ± 12, -2 ± 30 ms over all."""
     for name in NAMES:
         trusted = np.abs(untouched.errors(name, reliable_only=True))
         every = np.abs(untouched.errors(name, reliable_only=False))
-        assert np.quantile(trusted, 0.95) <= np.quantile(every, 0.95) + 1e-9
+        assert np.quantile(trusted, 0.95) <= np.quantile(every, 0.95) + SAMPLING_MS
 
 
 def test_the_hand_is_read_aright(open_data: Path):
