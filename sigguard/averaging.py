@@ -31,7 +31,7 @@ class BeatStack:
 
 
 def stack_beats(
-    wave_mv: NDArray[np.float64],
+    wave_mv: NDArray[np.floating],
     row: NDArray[np.intp],
     at: NDArray[np.float64],
     likeness: NDArray[np.float64],
@@ -42,13 +42,13 @@ def stack_beats(
     k_max = max(1, int(count.max(initial=0)))
     slot = np.arange(len(row)) - np.concatenate([[0], np.cumsum(count)[:-1]])[row]
     whole = np.floor(at).astype(np.intp)
-    f = (at - whole)[:, None]
+    f = (at - whole)[:, None].astype(wave_mv.dtype)
     columns = whole[:, None] + np.arange(-ZERO - 1, LENGTH - ZERO + 2)
     raw = wave_mv[row[:, None], np.clip(columns, 0, n - 1)]
     a, b, c, d = raw[:, :-3], raw[:, 1:-2], raw[:, 2:-1], raw[:, 3:]
     cut = b + 0.5 * f * (c - a + f * (2 * a - 5 * b + 4 * c - d + f * (3 * (b - c) + d - a)))
     inside = ((columns >= 0) & (columns < n))[:, 1:-2]
-    cuts = np.zeros((n_rows, k_max, LENGTH))
+    cuts = np.zeros((n_rows, k_max, LENGTH), dtype=wave_mv.dtype)
     valid = np.zeros((n_rows, k_max, LENGTH), dtype=bool)
     present = np.zeros((n_rows, k_max), dtype=bool)
     where = np.full((n_rows, k_max), np.nan)
@@ -70,11 +70,11 @@ def dominant(stack: BeatStack) -> NDArray[np.bool_]:
     return stack.present & (like >= 0.75 * good[:, None])
 
 
-def masked_median(values: NDArray[np.float64], mask: NDArray[np.bool_]) -> NDArray[np.float64]:
+def masked_median(values: NDArray[np.floating], mask: NDArray[np.bool_]) -> NDArray[np.float64]:
     """Median over axis 1 of (R, K, …) where ``mask`` holds; 0 where it holds nowhere."""
     if values.shape[1] == 0:
         return np.zeros((values.shape[0], *values.shape[2:]))
-    ranked = np.sort(np.where(mask, values, np.inf), axis=1)
+    ranked = np.sort(np.where(mask, values, np.array(np.inf, dtype=values.dtype)), axis=1)
     count = mask.sum(axis=1)
     low = np.take_along_axis(ranked, np.maximum((count - 1) // 2, 0)[:, None], axis=1)[:, 0]
     high = np.take_along_axis(ranked, np.minimum(count // 2, values.shape[1] - 1)[:, None], axis=1)[:, 0]
@@ -103,8 +103,12 @@ def level_beats(
     from_pq = np.arange(LENGTH)[None, :] - (onset - 4)[:, None]
     # Before its own PQ point a beat drifts as the interval before it did.
     before = np.concatenate([rate[:, :1], rate[:, :-1]], axis=1)
-    drift = np.where(from_pq[:, None, :] >= 0, rate[:, :, None], before[:, :, None]) * from_pq[:, None, :]
-    cuts = np.where(stack.valid, stack.cuts_mv - filled[:, :, None] - drift, 0.0)
+    kind = stack.cuts_mv.dtype
+    away = from_pq[:, None, :].astype(kind)
+    drift = np.where(away >= 0, rate[:, :, None].astype(kind), before[:, :, None].astype(kind)) * away
+    drift += filled[:, :, None].astype(kind)
+    cuts = stack.cuts_mv - drift
+    cuts *= stack.valid
     return cuts, np.where(good, level, np.nan)
 
 
@@ -124,7 +128,6 @@ class Average:
 
     beat_mv: NDArray[np.float64]  # (R, 1 + REPLICATES, LENGTH): the average first
     weight: NDArray[np.float64]  # (R, K), sums to 1 (or 0 where there is no beat)
-    residual_mv: NDArray[np.float64]  # (R, K, LENGTH): cut minus average, 0 outside the row
     stray_mv: NDArray[np.float64]  # (R, K): rms of the residual over the beat; NaN where absent
     n_effective: NDArray[np.float64]  # (R,)
 
@@ -134,9 +137,10 @@ def average(cuts_mv: NDArray[np.float64], valid: NDArray[np.bool_], group: NDArr
     mask = valid & group[:, :, None]
     centre = masked_median(cuts_mv, mask)
     weight = np.where(group, 1.0, 0.0)
+    inside = valid[:, :, CORE].astype(cuts_mv.dtype)
+    inside_n = np.maximum(inside.sum(axis=2), 1)
     for _ in range(2):
-        residual = np.where(valid, cuts_mv - centre[:, None, :], 0.0)
-        power = (residual[:, :, CORE] ** 2).sum(axis=2) / np.maximum(valid[:, :, CORE].sum(axis=2), 1)
+        power = _stray_power(cuts_mv, centre, inside, inside_n)
         usual = masked_median(power[:, :, None], group[:, :, None])[:, 0]
         weight = np.where(group, 1.0 / np.maximum(power + 0.3 * usual[:, None], 1e-9), 0.0)
         weight /= np.maximum(weight.sum(axis=1, keepdims=True), 1e-300)
@@ -144,10 +148,18 @@ def average(cuts_mv: NDArray[np.float64], valid: NDArray[np.bool_], group: NDArr
     signs = _half_samples(group.shape[1])
     members = weight[:, None, :] * (1.0 + signs[None])
     beat = _mean(cuts_mv, valid, np.concatenate([weight[:, None, :], members], axis=1))
-    residual = np.where(valid, cuts_mv - beat[:, :1], 0.0)
-    power = (residual[:, :, CORE] ** 2).sum(axis=2) / np.maximum(valid[:, :, CORE].sum(axis=2), 1)
+    power = _stray_power(cuts_mv, beat[:, 0], inside, inside_n)
     n_effective = np.where(group.any(axis=1), 1.0 / np.maximum((weight**2).sum(axis=1), 1e-12), 0.0)
-    return Average(beat, weight, residual, np.where(group, np.sqrt(power), np.nan), n_effective)
+    return Average(beat, weight, np.where(group, np.sqrt(power), np.nan), n_effective)
+
+
+def _stray_power(
+    cuts_mv: NDArray, centre: NDArray, inside: NDArray, inside_n: NDArray
+) -> NDArray[np.floating]:
+    """(R, K): mean square of each beat about the centre (R, L) over CORE, columns outside the row left out."""
+    stray = cuts_mv[:, :, CORE] - centre[:, None, CORE].astype(cuts_mv.dtype)
+    power: NDArray[np.floating] = np.einsum("rkl,rkl,rkl->rk", stray, stray, inside)
+    return power.astype(np.float64) / inside_n
 
 
 CORE = slice(ZERO - int(0.30 * FS), ZERO + int(0.45 * FS))
@@ -155,7 +167,8 @@ CORE = slice(ZERO - int(0.30 * FS), ZERO + int(0.45 * FS))
 
 def _mean(cuts: NDArray, valid: NDArray, weight: NDArray) -> NDArray[np.float64]:
     """(R, M, L): weighted means of (R, K, L) under weights (R, M, K), columns outside a row left out."""
-    total = weight @ valid.astype(np.float64)
+    weight = weight.astype(cuts.dtype)
+    total = weight @ valid.astype(cuts.dtype)
     return (weight @ cuts) / np.maximum(total, 1e-12)
 
 

@@ -36,7 +36,7 @@ class Seen:
 
     row: NDArray[np.intp]
     at: NDArray[np.intp]
-    height: NDArray[np.float64]  # over the row's typical height
+    height: NDArray[np.floating]  # over the row's typical height
     sharp: NDArray[np.float64]
     length: NDArray[np.float64]
     likeness: NDArray[np.float64]

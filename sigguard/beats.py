@@ -73,13 +73,13 @@ def slope_curve(work: RowTransform) -> NDArray[np.float64]:
     return uniform_filter1d(env, max(3, int(0.06 * work.fs_work_hz)), axis=1, mode="nearest")
 
 
-def length_curve(smooth_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.float64]:
+def length_curve(smooth_mv: NDArray[np.floating], fs_hz: float) -> NDArray[np.float64]:
     """Curve length over 130 ms of (R, n) rows low-passed at 16 Hz (Zong, Moody and Jiang 2003)."""
     step = np.abs(np.diff(smooth_mv, axis=1, prepend=smooth_mv[:, :1]))
     return uniform_filter1d(step, max(3, int(0.13 * fs_hz)), axis=1, mode="nearest") * int(0.13 * fs_hz)
 
 
-def length_band(work: RowTransform) -> NDArray[np.float64]:
+def length_band(work: RowTransform) -> NDArray[np.floating]:
     """Rows as the ``length`` detector wants them, 1 to 16 Hz."""
     return work.band(high_pass(work.freq_hz, 1.0) * low_pass(work.freq_hz, 16.0, 3))
 
@@ -97,7 +97,7 @@ class Beats:
     row: NDArray[np.intp]
     at: NDArray[np.float64]
     likeness: NDArray[np.float64]  # correlation of each with its row's typical complex
-    height: NDArray[np.float64]  # relative to the row's typical height
+    height: NDArray[np.floating]  # relative to the row's typical height
     weakest_kept: NDArray[np.float64]  # (R,) strength of the least beat, relative to the threshold
     strongest_left: NDArray[np.float64]  # (R,) strength of the best candidate that is no beat, likewise
     between: NDArray[np.float64]  # (R,) level between the strong peaks over the typical height
@@ -107,7 +107,7 @@ class Beats:
     best_left: NDArray[np.float64]  # (R,) its probability of the best candidate left out; 0 without one
 
 
-def complexes(qrs_mv: NDArray[np.float64], row: NDArray, at: NDArray, half: int) -> NDArray[np.float64]:
+def complexes(qrs_mv: NDArray[np.floating], row: NDArray, at: NDArray, half: int) -> NDArray[np.float64]:
     """(n_beats, 2*half+1) cut-outs of (R, n) rows; columns outside a row repeat its edge."""
     columns = np.clip(at[:, None] + np.arange(-half, half + 1), 0, qrs_mv.shape[1] - 1)
     return qrs_mv[row[:, None], columns]
@@ -121,13 +121,13 @@ def typical_complex(cuts: NDArray, row: NDArray, n_rows: int) -> NDArray[np.floa
     """
     unit = cuts / np.maximum(np.sqrt((cuts**2).sum(axis=1, keepdims=True)), 1e-12)
     count = np.bincount(row, minlength=n_rows)
-    out = np.zeros((n_rows, cuts.shape[1]))
+    out = np.zeros((n_rows, cuts.shape[1]), dtype=cuts.dtype)
     if not len(row):
         return out
     k_max = int(count.max())
     start = np.concatenate([[0], np.cumsum(count)[:-1]])
     slot = np.arange(len(row)) - start[row]
-    stacked = np.zeros((n_rows, k_max, cuts.shape[1]))
+    stacked = np.zeros((n_rows, k_max, cuts.shape[1]), dtype=cuts.dtype)
     stacked[row, slot] = unit
     present = np.zeros((n_rows, k_max), dtype=bool)
     present[row, slot] = True
@@ -144,7 +144,7 @@ def typical_complex(cuts: NDArray, row: NDArray, n_rows: int) -> NDArray[np.floa
 
 
 def best_likeness(
-    qrs_mv: NDArray[np.float64], row: NDArray, at: NDArray, shape: NDArray[np.float64], reach: int
+    qrs_mv: NDArray[np.floating], row: NDArray, at: NDArray, shape: NDArray[np.float64], reach: int
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """(correlation, shift) of each candidate with its row's typical complex at the best shift within ±reach.
 
@@ -175,7 +175,32 @@ def parabola_top(
     return mid, np.where(inner, 0.5 * (left - right) / np.where(inner, bend, -1.0), 0.0)
 
 
-def find_beats(work: RowTransform, judge: Judge | None = None) -> Beats:
+@dataclass(frozen=True, slots=True, eq=False)
+class Curves:
+    """What both the search in each lead and the one over all leads start from, (R, n) at the work rate."""
+
+    slope: NDArray[np.floating]  # detection function
+    sharp: NDArray[np.floating]  # envelope of the 12–40 Hz band
+    qrs_mv: NDArray[np.floating]
+    peaks: Candidates  # of ``slope``
+    height: NDArray[np.floating]  # of each peak, over the row's typical height
+    between: NDArray[np.float64]  # (R,) level between the strong peaks, over the typical height
+
+
+def detection_curves(work: RowTransform) -> Curves:
+    """Detection function, its peaks and the bands that describe them."""
+    fs_hz = work.fs_work_hz
+    slope = slope_curve(work)
+    peaks = candidates(slope, fs_hz)
+    level = np.maximum(peaks.level, 1e-9)
+    height = peaks.height / level[peaks.row]
+    sharp = uniform_filter1d(work.envelope(band_pass(work.freq_hz, 12.0, 40.0)), 15, axis=1)
+    qrs_mv = work.band(band_pass(work.freq_hz, *QRS_BAND_HZ))
+    between = level_between(slope / level[:, None], peaks.row, peaks.at, height >= 0.6, int(0.12 * fs_hz))
+    return Curves(slope, sharp, qrs_mv, peaks, height, between)
+
+
+def find_beats(work: RowTransform, judge: Judge | None = None, *, curves: Curves | None = None) -> Beats:
     """Beats of all rows: candidates of the ``slope`` detector, weighed by rule and, in noise, by ``judge``.
 
     ``judge`` gives the probability that each of some described candidates is a beat (see beat_judge);
@@ -183,7 +208,7 @@ def find_beats(work: RowTransform, judge: Judge | None = None) -> Beats:
     is nearly sure against them: an odd complex in a clean row is more likely ectopy than noise. Flat
     rows give none.
     """
-    seen, threshold, shift = survey(work)
+    seen, threshold, shift = survey(work, curves or detection_curves(work))
     keep = seen.kept
     if judge is not None and len(seen.row):
         chance = judge(candidate_features(seen))
@@ -213,27 +238,24 @@ def find_beats(work: RowTransform, judge: Judge | None = None) -> Beats:
     )
 
 
-def survey(work: RowTransform) -> tuple[Seen, NDArray[np.float64], NDArray[np.float64]]:
+def survey(work: RowTransform, curves: Curves) -> tuple[Seen, NDArray[np.float64], NDArray[np.float64]]:
     """(all candidates as described for a judge, threshold of each row, shift to the typical complex of each).
 
     The rule's threshold rises with the level of what lies between the strong peaks, so that noise of
     the same band does not turn into beats.
     """
     fs_hz = work.fs_work_hz
-    curve = slope_curve(work)
-    peaks = candidates(curve, fs_hz)
-    level = np.maximum(peaks.level, 1e-9)
-    height = peaks.height / level[peaks.row]
-    qrs_mv = work.band(band_pass(work.freq_hz, *QRS_BAND_HZ))
+    peaks, height, qrs_mv, between = curves.peaks, curves.height, curves.qrs_mv, curves.between
+    n_rows, n_work = curves.slope.shape
     seeds = height >= 0.5
     cuts = complexes(qrs_mv, peaks.row, peaks.at, int(0.08 * fs_hz))
-    shape = typical_complex(cuts[seeds], peaks.row[seeds], len(curve))
+    shape = typical_complex(cuts[seeds], peaks.row[seeds], n_rows)
     likeness, shift = best_likeness(qrs_mv, peaks.row, peaks.at, shape, int(0.04 * fs_hz))
-    between = level_between(curve / level[:, None], peaks.row, peaks.at, height >= 0.6, int(0.12 * fs_hz))
     # Where it is quiet an odd shape is believed (ectopy); the noisier, the more a beat must look like one.
     by_shape = np.clip(SHAPE_COUNTS[0] + SHAPE_COUNTS[1] * between, 0.0, 0.7)[peaks.row]
     strength = np.minimum(height, 3.0) * (1.0 - by_shape * (1.0 - np.clip(likeness, 0, 1)))
-    sharp = _sharpness(work, peaks)
+    # A T wave has little in the 12–40 Hz band.
+    sharp = maximum_filter1d(curves.sharp, 25, axis=1)[peaks.row, peaks.at]
     threshold = np.clip(4.0 * between, 0.28, 0.7)
     keep = separate(peaks, strength, sharp, fs_hz, strength >= threshold[peaks.row])
     keep = search_back(peaks, strength, fs_hz, keep, threshold)
@@ -249,7 +271,7 @@ def survey(work: RowTransform) -> tuple[Seen, NDArray[np.float64], NDArray[np.fl
         keep,
         cuts,
         between,
-        curve.shape[1],
+        n_work,
         fs_hz,
     )
     return seen, threshold, shift
@@ -287,12 +309,6 @@ def level_between(
     count = (near == 0).sum(axis=1)
     middle = ranked[np.arange(len(ranked)), np.maximum(count // 2 - 1, 0)]
     return np.where(count > 0, middle, 0.0)
-
-
-def _sharpness(work: RowTransform, peaks: Candidates) -> NDArray[np.float64]:
-    """Height of each candidate in the 12–40 Hz band: a T wave has little of it."""
-    env = uniform_filter1d(work.envelope(band_pass(work.freq_hz, 12.0, 40.0)), 15, axis=1)
-    return maximum_filter1d(env, 25, axis=1)[peaks.row, peaks.at]
 
 
 def separate(

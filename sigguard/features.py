@@ -47,7 +47,7 @@ def row_features(
     marks: Marks,
     rhythm: Rhythm,
     pq_level_mv: NDArray[np.float64],
-    residual_mv: NDArray[np.float64],
+    residual_mv: NDArray[np.floating],
     rails_mv: NDArray[np.float64] | None,
     step_mv: NDArray[np.float64] | None,
     mains_among_hz: tuple[float, ...],
@@ -133,7 +133,7 @@ def _detection_columns(
     }
 
 
-def _ranked(values: NDArray[np.float64], row: NDArray[np.intp], n_rows: int) -> NDArray[np.float64]:
+def _ranked(values: NDArray[np.floating], row: NDArray[np.intp], n_rows: int) -> NDArray[np.float64]:
     """(R, K): the values of each row in ascending order, NaN after the last."""
     count = np.bincount(row, minlength=n_rows)
     order = np.lexsort((values, row))

@@ -22,7 +22,7 @@ PAD_S = 1.5
 class RowTransform:
     """The transform of (R, N) rows, from which filtered rows at the work rate are drawn."""
 
-    spectrum: NDArray[np.complex128]  # (R, n_bins)
+    spectrum: NDArray[np.complex64]  # (R, n_bins)
     freq_hz: NDArray[np.float64]  # (n_bins,)
     n_native: int  # padded length at the native rate
     n_work: int  # padded length at the work rate
@@ -30,25 +30,27 @@ class RowTransform:
     lead_in: float  # work samples before the row's first sample (may be fractional)
     n_out: int  # work samples of the row itself
 
-    def band(self, gain: NDArray[np.float64]) -> NDArray[np.float64]:
+    def band(self, gain: NDArray[np.float64]) -> NDArray[np.floating]:
         """Rows (R, n_out) at the work rate after multiplying the spectrum by ``gain`` (n_bins,)."""
-        return self._cut(fft.irfft(self._fit(self.spectrum * gain), n=self.n_work, axis=-1, overwrite_x=True))
+        return self._cut(fft.irfft(self._fit(gain), n=self.n_work, axis=-1, overwrite_x=True))
 
-    def envelope(self, gain: NDArray[np.float64]) -> NDArray[np.float64]:
+    def envelope(self, gain: NDArray[np.float64]) -> NDArray[np.floating]:
         """Magnitude of the analytic signal of a band, (R, n_out)."""
-        half = self._fit(self.spectrum * gain)
+        half = self._fit(2.0 * gain)
         full = np.zeros((half.shape[0], self.n_work), dtype=half.dtype)
-        full[:, : half.shape[1]] = 2.0 * half
+        full[:, : half.shape[1]] = half
         return self._cut(np.abs(fft.ifft(full, axis=-1, overwrite_x=True)))
 
-    def _fit(self, spectrum: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    def _fit(self, gain: NDArray[np.float64]) -> NDArray[np.complex64]:
+        """The spectrum under a gain, cut or filled to the bins of the work rate."""
         n_bins = self.n_work // 2 + 1
-        out = spectrum[:, :n_bins]
+        scaled = (gain[:n_bins] * (self.n_work / self.n_native)).astype(np.float32)
+        out = self.spectrum[:, :n_bins] * scaled
         if out.shape[1] < n_bins:
             out = np.pad(out, ((0, 0), (0, n_bins - out.shape[1])))
-        return out * (self.n_work / self.n_native)
+        return out
 
-    def _cut(self, rows: NDArray[np.float64]) -> NDArray[np.float64]:
+    def _cut(self, rows: NDArray[np.floating]) -> NDArray[np.floating]:
         first = int(self.lead_in)
         return rows[:, first : first + self.n_out]
 
@@ -71,19 +73,19 @@ def transform_rows(x_mv: NDArray[np.float64], fs_hz: float) -> RowTransform:
     freq = np.arange(spectrum.shape[1]) * (fs_hz / n_native)
     shift = (lead_in - whole) / fs_work
     if abs(shift) > 1e-9:
-        spectrum *= np.exp(2j * np.pi * freq * shift)
+        spectrum *= np.exp(2j * np.pi * freq * shift).astype(np.complex64)
     return RowTransform(
         spectrum, freq, n_native, n_work, fs_work, float(whole), int(np.floor((n - 1) * fs_work / fs_hz)) + 1
     )
 
 
-def _extend(x_mv: NDArray[np.float64], left: int, right: int, fs_hz: float) -> NDArray[np.float64]:
+def _extend(x_mv: NDArray[np.float64], left: int, right: int, fs_hz: float) -> NDArray[np.floating]:
     """Odd reflection about a short mean at each end, faded to nothing."""
     n = x_mv.shape[1]
     k = max(1, min(n, int(0.04 * fs_hz)))
     mean = x_mv.mean(axis=1, keepdims=True)
     x = x_mv - mean
-    out = np.zeros((x.shape[0], left + n + right))
+    out = np.zeros((x.shape[0], left + n + right), dtype=np.float32)
     out[:, left : left + n] = x
     reach_l, reach_r = min(left, n - 1), min(right, n - 1)
     if reach_l > 0:

@@ -16,7 +16,6 @@ from scipy.ndimage import uniform_filter1d
 
 from sigguard import averaging, beats, waves
 from sigguard.averaging import BeatStack
-from sigguard.filters import RowTransform, band_pass
 from sigguard.measure import (
     MIN_P_EXPLAINED,
     MIN_P_RATIO,
@@ -70,8 +69,8 @@ def analyse_global(
     n_strips, n_leads, n = x_mv.shape
     each: NDArray[np.float64] = np.asarray(x_mv, dtype=np.float64).reshape(n_strips * n_leads, n)
     ready = prepared or prepare(each, fs_hz)
-    strip, at, detail = common_beats(ready.work, n_strips, n_leads)
-    at, likeness = _align(ready.work, strip, at, n_strips, n_leads)
+    strip, at, detail = common_beats(ready.curves, ready.work.fs_work_hz, n_strips, n_leads)
+    at, likeness = _align(ready.curves.qrs_mv, ready.work.fs_work_hz, strip, at, n_strips, n_leads)
     rows = (strip[:, None] * n_leads + np.arange(n_leads)).ravel()
     order = np.lexsort((np.repeat(at, n_leads), rows))
     stack = averaging.stack_beats(
@@ -91,22 +90,19 @@ class _Detail:
 
 
 def common_beats(
-    work: RowTransform, n_strips: int, n_leads: int
+    curves: beats.Curves, fs_hz: float, n_strips: int, n_leads: int
 ) -> tuple[NDArray[np.intp], NDArray[np.float64], _Detail]:
     """(strip, work sample) of the beats seen by all leads together."""
-    fs_hz = work.fs_work_hz
-    curve = beats.slope_curve(work)
-    peaks = beats.candidates(curve, fs_hz)
-    relative = curve / np.maximum(peaks.level, 1e-9)[:, None]
-    height = peaks.height / np.maximum(peaks.level, 1e-9)[peaks.row]
-    between = beats.level_between(relative, peaks.row, peaks.at, height >= 0.6, int(0.12 * fs_hz))
+    peaks, between = curves.peaks, curves.between
+    relative = curves.slope / np.maximum(peaks.level, 1e-9)[:, None]
     flat = peaks.level < 1e-4
     weight = np.where(flat, 0.0, 1.0 / (between + 0.05) ** 2).reshape(n_strips, n_leads)
     weight = weight / np.maximum(weight.sum(axis=1, keepdims=True), 1e-12)
     together = np.einsum("sl,sln->sn", weight, np.minimum(relative, 3.0).reshape(n_strips, n_leads, -1))
-    sharp = uniform_filter1d(work.envelope(band_pass(work.freq_hz, 12.0, 40.0)), 15, axis=1)
     sharp = np.einsum(
-        "sl,sln->sn", weight, (sharp / np.maximum(peaks.level, 1e-9)[:, None]).reshape(n_strips, n_leads, -1)
+        "sl,sln->sn",
+        weight,
+        (curves.sharp / np.maximum(peaks.level, 1e-9)[:, None]).reshape(n_strips, n_leads, -1),
     )
     at, row, detail = _pick(together, sharp, fs_hz)
     return row, at, detail
@@ -130,13 +126,18 @@ def _pick(together: NDArray, sharp: NDArray, fs_hz: float) -> tuple[NDArray, NDA
 
 
 def _align(
-    work: RowTransform, strip: NDArray[np.intp], at: NDArray[np.float64], n_strips: int, n_leads: int
+    qrs_mv: NDArray[np.floating],
+    fs_hz: float,
+    strip: NDArray[np.intp],
+    at: NDArray[np.float64],
+    n_strips: int,
+    n_leads: int,
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """(refined work samples, likeness to the typical complex) over all leads' QRS bands laid end to end."""
     if not len(at):
         return at, np.zeros(0)
-    half, reach = int(0.08 * work.fs_work_hz), int(0.04 * work.fs_work_hz)
-    qrs_mv = work.band(band_pass(work.freq_hz, *beats.QRS_BAND_HZ)).reshape(n_strips, n_leads, -1)
+    half, reach = int(0.08 * fs_hz), int(0.04 * fs_hz)
+    qrs_mv = qrs_mv.reshape(n_strips, n_leads, -1)
     columns = np.clip(
         at.astype(np.intp)[:, None] + np.arange(-half - reach, half + reach + 1), 0, qrs_mv.shape[2] - 1
     )

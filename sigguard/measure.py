@@ -200,14 +200,17 @@ class Prepared:
 
     work: RowTransform
     found: beats.Beats
-    wave_mv: NDArray[np.float64]  # (R, n) at the work rate
+    wave_mv: NDArray[np.floating]  # (R, n) at the work rate
+    curves: beats.Curves
 
 
 def prepare(x_mv: NDArray[np.float64], fs_hz: float) -> Prepared:
     """Fill, transform, find beats, filter: (R, N) rows, NaN where missing."""
     filled, missing = fill_gaps(x_mv)
     work = transform_rows(np.asarray(filled, dtype=np.float64), fs_hz)
-    return Prepared(work, drop_in_gaps(beats.find_beats(work, beat_chance), missing, work), wave_band(work))
+    curves = beats.detection_curves(work)
+    found = beats.find_beats(work, beat_chance, curves=curves)
+    return Prepared(work, drop_in_gaps(found, missing, work), wave_band(work), curves)
 
 
 def beat_chance(candidates: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -215,7 +218,7 @@ def beat_chance(candidates: NDArray[np.float64]) -> NDArray[np.float64]:
     return shipped_judge().predict_proba(candidates)[:, 0]
 
 
-def wave_band(work: RowTransform, upper_hz: float = WAVE_BAND_HZ[1]) -> NDArray[np.float64]:
+def wave_band(work: RowTransform, upper_hz: float = WAVE_BAND_HZ[1]) -> NDArray[np.floating]:
     """Rows in which the waves are measured, (R, n) at the work rate."""
     return work.band(high_pass(work.freq_hz, WAVE_BAND_HZ[0]) * low_pass(work.freq_hz, upper_hz, 5))
 
@@ -400,8 +403,8 @@ def read_values(mean: Average, marks: Marks, rhythm: Rhythm) -> tuple[NDArray[np
 
 
 def residual_rows(
-    wave_mv: NDArray[np.float64], stack: BeatStack, group: NDArray[np.bool_], mean: Average
-) -> NDArray[np.float64]:
+    wave_mv: NDArray[np.floating], stack: BeatStack, group: NDArray[np.bool_], mean: Average
+) -> NDArray[np.floating]:
     """(R, n): the row less its averaged beats; zero under beats of another shape, which are not noise."""
     n_rows, n = wave_mv.shape
     residual = wave_mv.copy()

@@ -20,6 +20,7 @@ from scipy.special import expit
 
 from sigguard.errors import ModelError
 
+_TOGETHER = 5  # levels that all rows go down side by side; few nodes lie deeper in trees that grew freely
 _BLOCK_CELLS = 24_000  # rows × trees looked at together: the working arrays stay in the processor's cache
 
 
@@ -155,7 +156,7 @@ class TreeEnsemble:
         at = np.empty_like(node)
         x = np.empty(node.shape)
         limit = np.empty(node.shape)
-        for _ in range(self.depth):
+        for _ in range(min(self.depth, _TOGETHER)):
             np.take(self.column, node, out=at, mode="clip")
             at *= width
             at += row
@@ -163,12 +164,26 @@ class TreeEnsemble:
             np.take(self.threshold, node, out=limit, mode="clip")
             np.take(self.left, node, out=at, mode="clip")
             np.add(at, ~(x <= limit), out=node, casting="unsafe")
+        if self.depth > _TOGETHER:
+            self._descend_rest(node.reshape(-1), flat, width)
         leaf = np.take(self.value, node, out=x, mode="clip")
         odds = np.empty((self.n_models, width))
         for model in range(self.n_models):
             trees = leaf[self.model_start[model] : self.model_start[model + 1]]
             odds[model] = self.baseline[model] + trees.sum(axis=0)
         return odds[:, :n].T
+
+    def _descend_rest(self, node: NDArray[np.intp], flat: NDArray[np.float64], width: int) -> None:
+        """The few that have not reached a leaf after _TOGETHER levels go on by themselves; changes ``node``."""
+        left = self.left
+        on = np.flatnonzero(left[node] != node)
+        row = on % width
+        for _ in range(self.depth - _TOGETHER):
+            here = node[on]
+            here = left[here] + ~(flat[self.column[here] * width + row] <= self.threshold[here])
+            node[on] = here
+            more = left[here] != here
+            on, row = on[more], row[more]
 
 
 def _join_starts(starts: Sequence[NDArray[np.int64]], offset: NDArray[np.int64]) -> NDArray[np.int64]:

@@ -230,13 +230,14 @@ def t_wave(
     Its end is where the trapezium under the last limb is greatest (Vázquez-Seisdedos et al. 2011).
     """
     rows, ms = np.arange(len(smooth_mv)), 1000 / FS
-    column = np.arange(LENGTH)[None, :]
-    first = ZERO + np.rint((np.nan_to_num(qrs_off_ms, nan=50.0) + 72) / ms).astype(int)
-    last = np.clip(ZERO + np.rint(np.nan_to_num(limit_ms) / ms).astype(int), 0, LENGTH - 1)
+    n = LENGTH - ZERO  # columns count from the fiducial: nothing before it is looked at
+    column = np.arange(n, dtype=np.float32)[None, :]
+    first = np.rint((np.nan_to_num(qrs_off_ms, nan=50.0) + 72) / ms).astype(int)
+    last = np.clip(np.rint(np.nan_to_num(limit_ms) / ms).astype(int), 0, n - 1)
     room = last - first > int(0.10 * FS)
-    last = np.minimum(np.maximum(last, first + int(0.10 * FS)), LENGTH - 1)
+    last = np.minimum(np.maximum(last, first + int(0.10 * FS)), n - 1)
     first = np.minimum(first, last - 5)
-    y = smooth_mv - pq_mv[:, None]
+    y = smooth_mv[:, ZERO:] - pq_mv[:, None]
     slope = np.zeros_like(y)
     slope[:, 1:-1] = 0.5 * (y[:, 2:] - y[:, :-2])
     inside = (column >= first[:, None]) & (column <= last[:, None])
@@ -249,18 +250,18 @@ def t_wave(
     area = sign[:, None] * (y[rows, steep][:, None] - y) * (2 * right[:, None] - column - steep[:, None])
     area = np.where((column >= steep[:, None]) & (column <= right[:, None]), area, -np.inf)
     best = np.maximum(area.max(axis=1), 1e-9)
-    weight = np.exp(np.maximum(area / best[:, None] - 1.0, -10.0) / 0.01)
+    weight = np.exp(np.maximum(area * (100.0 / best[:, None]) - 100.0, -80.0))
     # A limb that the limit cuts off spans no trapezium: it has no end to give.
     room &= area.max(axis=1) > 1e-9
     end = (weight * column).sum(axis=1) / np.maximum(weight.sum(axis=1), 1e-12)
-    foot = y[rows, np.clip(np.rint(end).astype(int), 0, LENGTH - 1)]
+    foot = y[rows, np.clip(np.rint(end).astype(int), 0, n - 1)]
 
     def where_room(values: NDArray[np.float64]) -> NDArray[np.float64]:
         return np.where(room, values, np.nan)
 
     return TWave(
-        where_room((top - ZERO) * ms),
-        where_room((end - ZERO) * ms - T_INWARD_MS),
+        where_room(top * ms),
+        where_room(end * ms - T_INWARD_MS),
         where_room(y[rows, top]),
         where_room(np.abs(y[rows, top] - foot)),
         where_room(rival),
@@ -275,18 +276,19 @@ def t_limit_ms(rr_ms: NDArray[np.float64], qrs_on_ms: NDArray[np.float64]) -> ND
 def _last_limb(
     slope: NDArray[np.float64], first: NDArray[np.intp], rr_ms: NDArray[np.float64]
 ) -> tuple[NDArray[np.intp], NDArray[np.float64]]:
-    """(column of the limb that ends the T wave, steepness of the best other limb over its own).
+    """(column, from the fiducial, of the limb that ends the T wave; steepness of the best other limb over its own).
 
     It is steep, near the usual distance for this heart rate, and the last such.
     """
-    column = np.arange(LENGTH)[None, :]
+    n = slope.shape[1]
+    column = np.arange(n, dtype=slope.dtype)[None, :]
     usual = T_LIMB_MS * np.sqrt(np.clip(rr_ms, 300, 1500) / 1000)
-    off_by = ((column - ZERO) * (1000 / FS) - usual[:, None]) / (0.30 * usual[:, None])
+    off_by = column * (1000 / FS / 0.30 / usual[:, None]).astype(slope.dtype) - slope.dtype.type(1 / 0.30)
     steepness = np.abs(slope) * np.exp(-0.5 * off_by**2)
     summit = np.zeros(slope.shape, dtype=bool)
     summit[:, 1:-1] = (steepness[:, 1:-1] >= steepness[:, :-2]) & (steepness[:, 1:-1] > steepness[:, 2:])
     lasting = summit & (steepness >= LAST_LIMB * steepness.max(axis=1, keepdims=True))
-    steep = np.where(lasting.any(axis=1), LENGTH - 1 - lasting[:, ::-1].argmax(axis=1), first)
+    steep = np.where(lasting.any(axis=1), n - 1 - lasting[:, ::-1].argmax(axis=1), first)
     own = np.take_along_axis(steepness, steep[:, None], axis=1)[:, 0]
     # A rival is a limb whose standing near LAST_LIMB could flip with a little noise.
     other = np.where(summit & (np.abs(column - steep[:, None]) > int(0.06 * FS)), steepness, 0.0).max(axis=1)

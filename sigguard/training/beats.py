@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.beat_judge import CANDIDATE_FEATURES, FILE, candidate_features
-from sigguard.beats import survey
+from sigguard.beats import detection_curves, survey
 from sigguard.filters import transform_rows
 from sigguard.simulate.disturbance import ADDITIVE_KINDS, draw_disturbance
 from sigguard.simulate.ecg import draw_scene, simulate
@@ -73,7 +73,8 @@ def _spoilt(
 def _described(
     rows_mv: NDArray[np.float64], beats_s: list[NDArray[np.float64]]
 ) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
-    seen, _, _ = survey(transform_rows(rows_mv, FS_HZ))
+    work = transform_rows(rows_mv, FS_HZ)
+    seen, _, _ = survey(work, detection_curves(work))
     is_beat = np.zeros(len(seen.row), dtype=bool)
     for row, truth in enumerate(beats_s):
         mine = np.flatnonzero(seen.row == row)
