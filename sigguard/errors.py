@@ -27,6 +27,15 @@ class ReadError(SigguardError):
         self.file, self.where, self.expected, self.found, self.remedy = file, where, expected, found, remedy
         super().__init__(f"{file}: {where}: expected {expected}, found {found}; {remedy}")
 
+    def __reduce__(self) -> tuple:
+        """So that it can come out of another process: the usual way would call it with the sentence alone."""
+        told = {"where": self.where, "expected": self.expected, "found": self.found, "remedy": self.remedy}
+        return _again, (type(self), self.file, told)
+
+
+def _again(kind: type[ReadError], file: str, told: dict[str, str]) -> ReadError:
+    return kind(file, **told)
+
 
 class NoECGLead(ReadError):
     """The file can be read, but none of its signals is an ECG lead."""

@@ -3,9 +3,8 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
-from functools import cache
 from pathlib import Path
 
 import numpy as np
@@ -14,25 +13,26 @@ from numpy.typing import NDArray
 from sigguard import __version__
 from sigguard.advice import advise
 from sigguard.blocks import SegmentPlan, plan_segments
+from sigguard.collecting import Collector
 from sigguard.electrodes import electrode_noise
 from sigguard.errors import UsageError
-from sigguard.features import FEATURE_NAMES
 from sigguard.findings import ElectrodeNoise, PatientFirst, Value
-from sigguard.global_values import GLOBAL_FEATURE_NAMES
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
 from sigguard.noise import MAINS_HZ
 from sigguard.patient_first import MARGIN_S, cut_findings, find_patient_first, join_findings
 from sigguard.profile import Profile, choose_profile, load_profile
 from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
-from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
+from sigguard.reliability import LEARNED_FAULTS
 from sigguard.report.document import Report
 from sigguard.rhythm_shape import grid_samples
-from sigguard.segment_pass import Part, Progress, Source, joined_tables, measure_all, merge_beats
+from sigguard.segment_pass import Part, Progress, Source, measure_all, shipped_model
 from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS, UNITS, Segments
 from sigguard.verdicts import silence_under
+from sigguard.workers import Reopen, Workers
 
 ALARM_BLOCK_S = 600.0
+LEAST_ALARM_BLOCKS = 6
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -87,19 +87,21 @@ def screen_path(
     fs_hz: float | None = None,
     units: str | None = None,
     fridericia: bool = False,
+    jobs: int = 1,
     progress: Progress | None = None,
 ) -> Report:
     """Check the recording at ``path`` and write its report into ``out_dir``/``name``.
 
     Writes report.json, segments.csv, with ``page`` report.html, with ``annotate`` NAME.sgq beside
-    them; each whole or not at all.
+    them; each whole or not at all. A long recording is shared out over ``jobs`` processes.
     """
     from sigguard.report.table import segments_csv
     from sigguard.writers.atomic import write_text_atomic
 
     options = Options.of(profile=profile, segment_s=segment_s, mains=mains, fridericia=fridericia)
     with open_recording(path, fs_hz=fs_hz, units=units, with_identity=with_identity) as source:
-        report = screen(source, options, progress=progress)
+        workers = Workers(Reopen(Path(path), fs_hz, units), jobs) if jobs > 1 else None
+        report = screen(source, options, workers=workers, progress=progress)
         folder = Path(out_dir) / (name or source.info.name)
         folder.mkdir(parents=True, exist_ok=True)
         segments_csv(report.segments, folder / "segments.csv")
@@ -145,25 +147,25 @@ class Options:
         return cls(chosen, segment_s, known[mains], fridericia)
 
 
-@cache
-def shipped_model() -> ReliabilityModel:
-    """The model that ships, loaded and proved once per process."""
-    return ReliabilityModel.load(feature_names=FEATURE_NAMES, global_feature_names=GLOBAL_FEATURE_NAMES)
-
-
-def screen(source: Source, options: Options, *, progress: Progress | None = None) -> Report:
-    """Samples to report."""
+def screen(
+    source: Source, options: Options, *, workers: Workers | None = None, progress: Progress | None = None
+) -> Report:
+    """Samples to report. ``workers`` may share out a long recording; the report is the same."""
     info, model = source.info, shipped_model()
     profile = options.profile or load_profile(choose_profile(info.n_leads, info.duration_s))
     plan = plan_segments(info.n_samples, info.fs_hz, options.segment_s)
-    parts = measure_all(source, plan, model, profile, options.mains_among_hz, progress)
-    beats = [merge_beats([part.lead_beats[k] for part in parts], info.fs_hz) for k in range(info.n_leads)]
-    alarms = _patient_first(source, beats)
-    segments = _silenced(joined_tables([part.segments for part in parts]), alarms)
-    handed = _global_measurements(parts, info, plan)
+    collected = Collector(info, len(plan) * info.n_leads)
+    for part in measure_all(
+        source, plan, model, profile, options.mains_among_hz, workers=workers, progress=progress
+    ):
+        collected.add(part)
+    beats = collected.lead_beats()
+    alarms = _patient_first(source, beats, collected.has_data, workers)
+    segments = _silenced(collected.segments(), alarms)
+    handed = _global_measurements(collected.strips, info, plan)
     values, st_by_lead = combine_values(segments, handed, fridericia=options.fridericia)
     summaries = lead_summaries(segments)
-    electrodes = _electrodes(parts, info)
+    electrodes = _electrodes(collected.strips, info)
     judgement = judge(profile, segments, values, st_by_lead, alarms, summaries=summaries)
     return Report(
         software_version=__version__,
@@ -181,7 +183,7 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
         advice=tuple(advise(segments, summaries, electrodes=electrodes, patient_first=alarms)),
         spans=spans(segments, info.duration_s),
         best_strip=best_strip(segments, info.leads, every=profile.name == "resting"),
-        beats=_beats_over_leads(parts, beats, info),
+        beats=collected.beats(),
         lead_beats=dict(zip(info.leads, beats, strict=True)),
         procedure_note=PROCEDURE_NOTE,
     )
@@ -208,52 +210,52 @@ def _silenced(segments: Segments, alarms: Sequence[PatientFirst]) -> Segments:
     return replace(segments, reliable=reliable, fault=fault, grade=grade_rows(reliable, segments.absent))
 
 
-def _beats_over_leads(
-    parts: Sequence[Part], lead_beats: Sequence[NDArray[np.int64]], info: RecordingInfo
-) -> NDArray[np.int64]:
-    """Common beats where they were looked for, else those of the lead whose rate scores best at the time."""
-    if info.n_leads == 1:
-        return lead_beats[0]
-    if all(part.common_beats is not None for part in parts):
-        return merge_beats([part.common_beats for part in parts if part.common_beats is not None], info.fs_hz)
-    chosen = []
-    for part in parts:
-        table = part.segments
-        best = table.score[:, 0].reshape(-1, info.n_leads).argmax(axis=1)
-        for k, lead in enumerate(best):
-            start, end = table.start_s[k * info.n_leads], table.end_s[k * info.n_leads]
-            at = part.lead_beats[lead]
-            chosen.append(at[(at >= start * info.fs_hz) & (at < end * info.fs_hz)])
-    return merge_beats(chosen, info.fs_hz)
-
-
-def _patient_first(source: Source, beats: Sequence[NDArray[np.int64]]) -> list[PatientFirst]:
+def _patient_first(
+    source: Source, beats: Sequence[NDArray], has_data: NDArray[np.bool_], workers: Workers | None
+) -> list[PatientFirst]:
     """Look for lethal rhythms block by block, with the margin that makes blocks see what the whole sees."""
     info = source.info
     grid = grid_samples(info.fs_hz)
     size = max(1, int(ALARM_BLOCK_S * info.fs_hz) // grid) * grid
     margin = int(np.ceil(MARGIN_S * info.fs_hz / grid)) * grid
-    has_data = np.zeros(info.n_leads, dtype=bool)
-    if info.n_samples > size:
+    whole = info.n_samples <= size
+
+    def tasks() -> Iterator[tuple]:
         for start in range(0, info.n_samples, size):
-            has_data |= np.isfinite(source.read(start, min(start + size, info.n_samples))).any(axis=1)
-    found: list[PatientFirst] = []
-    for start in range(0, info.n_samples, size):
-        first, last = max(0, start - margin), min(info.n_samples, start + size + margin)
-        block = source.read(first, last)
-        found += cut_findings(
-            find_patient_first(
-                block,
-                info.fs_hz,
-                info.leads,
-                lead_beats_s=[(at[(at >= first) & (at < last)] - first) / info.fs_hz for at in beats],
-                lead_has_data=has_data.tolist() if info.n_samples > size else None,
-            ),
-            offset_s=first / info.fs_hz,
-            start_s=start / info.fs_hz,
-            end_s=min(start + size, info.n_samples) / info.fs_hz,
-        )
-    return join_findings(found)
+            stop = min(start + size, info.n_samples)
+            first, last = max(0, start - margin), min(info.n_samples, stop + margin)
+            near = [at[np.searchsorted(at, first) : np.searchsorted(at, last)] for at in beats]
+            yield start, stop, first, last, near, None if whole else has_data.tolist()
+
+    found: Iterator[list[PatientFirst]]
+    if workers is None or info.n_samples < LEAST_ALARM_BLOCKS * size:
+        found = (_alarms(source, *task) for task in tasks())
+    else:
+        found = workers.run(_alarms, tasks())
+    return join_findings([alarm for part in found for alarm in part])
+
+
+def _alarms(
+    source: Source,
+    start: int,
+    stop: int,
+    first: int,
+    last: int,
+    beats: Sequence[NDArray],
+    has_data: list[bool] | None,
+) -> list[PatientFirst]:
+    """What is found between two samples, seen with a margin; ``beats`` within it by lead."""
+    info = source.info
+    found = find_patient_first(
+        source.read(first, last),
+        info.fs_hz,
+        info.leads,
+        lead_beats_s=[(at - first) / info.fs_hz for at in beats],
+        lead_has_data=has_data,
+    )
+    return cut_findings(
+        found, offset_s=first / info.fs_hz, start_s=start / info.fs_hz, end_s=stop / info.fs_hz
+    )
 
 
 def _electrodes(parts: Sequence[Part], info: RecordingInfo) -> list[ElectrodeNoise]:
@@ -268,7 +270,7 @@ def _global_measurements(
     parts: Sequence[Part], info: RecordingInfo, plan: SegmentPlan
 ) -> dict[str, Value] | None:
     """Global PR, QRS and QT of a short recording with several leads, over its segments."""
-    if any(part.global_value is None for part in parts):
+    if not parts:
         return None
     value = np.concatenate([part.global_value for part in parts])  # type: ignore[misc]
     bound = np.concatenate([part.global_bound for part in parts])  # type: ignore[misc]

@@ -2,16 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
-from typing import Any, Protocol
+from functools import cache
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.blocks import Batch, SegmentPlan, batches, rows_of
 from sigguard.features import FEATURE_NAMES
-from sigguard.global_values import analyse_global
+from sigguard.global_values import GLOBAL_FEATURE_NAMES, analyse_global
 from sigguard.grading import grade_rows
 from sigguard.measure import Analysis, analyse
 from sigguard.profile import Profile
@@ -27,9 +28,10 @@ from sigguard.verdicts import (
     limit_by_recording,
     small_here,
 )
+from sigguard.workers import Workers
 
 GLOBAL_MOST_S = 60.0  # longer recordings have too much change in them for one global value
-MIN_BEAT_GAP_S = 0.2
+LEAST_BATCHES = 6  # below that, starting other processes takes longer than they save
 Progress = Callable[[float], None]
 
 
@@ -55,6 +57,7 @@ class Part:
     global_absent: NDArray[np.int8] | None
     lead_weight: NDArray[np.float64] | None  # (n_segments, n_leads)
     residual_mv: NDArray[np.float32] | None  # (n_segments, n_leads, n)
+    has_data: NDArray[np.bool_]  # (n_leads,): at least one sample here
 
 
 def measure_all(
@@ -63,15 +66,58 @@ def measure_all(
     model: ReliabilityModel,
     profile: Profile,
     mains_among_hz: tuple[float, ...],
+    *,
+    workers: Workers | None = None,
     progress: Progress | None = None,
-) -> list[Part]:
-    parts = []
-    for batch in batches(plan, source.info.n_leads):
-        block = source.read(batch.read_start, batch.read_stop)
-        parts.append(_measure_batch(source.info, plan, batch, block, model, profile, mains_among_hz))
+) -> Iterator[Part]:
+    """The parts of a recording in order of time, each measured and judged by itself.
+
+    With ``workers`` the batches of a long recording are measured in other processes; what comes out is the same.
+    """
+    todo = list(batches(plan, source.info.n_leads))
+    found: Iterator[Part]
+    if workers is None or len(todo) < LEAST_BATCHES:
+        found = (
+            _measure_batch(
+                source.info,
+                plan,
+                batch,
+                source.read(batch.read_start, batch.read_stop),
+                model,
+                profile,
+                mains_among_hz,
+            )
+            for batch in todo
+        )
+    else:
+        found = workers.run(
+            _measure_there,
+            ((*_alone(batch, plan), profile, mains_among_hz) for batch in todo),
+        )
+    for batch, part in zip(todo, found, strict=True):
+        yield part
         if progress is not None:
             progress((batch.first + batch.count) / len(plan))
-    return parts
+
+
+def _alone(batch: Batch, plan: SegmentPlan) -> tuple[Batch, SegmentPlan]:
+    """A batch and a plan of only its segments: less to send than the plan of two weeks."""
+    own = slice(batch.first, batch.first + batch.count)
+    return replace(batch, first=0), replace(plan, start=plan.start[own], stop=plan.stop[own])
+
+
+def _measure_there(
+    source: Source, batch: Batch, plan: SegmentPlan, profile: Profile, mains_among_hz: tuple[float, ...]
+) -> Part:
+    """One batch in a process of its own."""
+    block = source.read(batch.read_start, batch.read_stop)
+    return _measure_batch(source.info, plan, batch, block, shipped_model(), profile, mains_among_hz)
+
+
+@cache
+def shipped_model() -> ReliabilityModel:
+    """The model that ships, loaded and proved once per process."""
+    return ReliabilityModel.load(feature_names=FEATURE_NAMES, global_feature_names=GLOBAL_FEATURE_NAMES)
 
 
 def _measure_batch(
@@ -113,6 +159,7 @@ def _measure_batch(
         common.get("absent"),
         common.get("weight"),
         residual,
+        np.asarray(np.isfinite(block_mv).any(axis=1)),
     )
 
 
@@ -189,21 +236,3 @@ def _global_part(
         "weight": found.weight,
         "agree": agreeing_leads(analysis, found.beat_strip, found.beat_s, n_leads, batch.size / fs_hz),
     }
-
-
-def joined_tables(parts: Sequence[Segments]) -> Segments:
-    if len(parts) == 1:
-        return parts[0]
-    columns = [name for name in Segments.__dataclass_fields__ if name not in ("leads", "feature_names")]
-    joined: dict[str, Any] = {
-        name: np.concatenate([getattr(part, name) for part in parts]) for name in columns
-    }
-    return replace(parts[0], **joined)
-
-
-def merge_beats(parts: Sequence[NDArray[np.int64]], fs_hz: float) -> NDArray[np.int64]:
-    """Beats of neighbouring segments put together; one found on both sides of a seam counts once."""
-    at = np.sort(np.concatenate([np.asarray(part, dtype=np.int64) for part in parts]))
-    if len(at) < 2:
-        return at
-    return at[np.diff(at, prepend=at[0] - int(fs_hz)) > MIN_BEAT_GAP_S * fs_hz]

@@ -15,14 +15,14 @@ import pytest
 from simulated import leads_of, strip, strips
 
 from sigguard import Recording, check
+from sigguard.collecting import merge_beats
 from sigguard.errors import UsageError
 from sigguard.features import FEATURE_NAMES
 from sigguard.measure import analyse
 from sigguard.recording import RecordingInfo
 from sigguard.report.document import Report, load_schema
 from sigguard.report.table import segments_csv
-from sigguard.screening import shipped_model
-from sigguard.segment_pass import merge_beats
+from sigguard.segment_pass import shipped_model
 from sigguard.segments import FAULTS, GRADES, MEASUREMENTS
 
 VALIDATOR = jsonschema.Draft202012Validator(load_schema())

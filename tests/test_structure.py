@@ -24,7 +24,8 @@ WORDS, SIGNAL, EDGES, JOINERS, CLI = range(5)
 FLOOR = {
     **dict.fromkeys(("errors", "recording", "segments", "findings", "profile", "resources"), WORDS),
     **dict.fromkeys(("readers", "writers", "report"), EDGES),
-    **dict.fromkeys(("screening", "trim", "live", "inbox", "simulate", "training"), JOINERS),
+    **dict.fromkeys(("screening", "segment_pass", "collecting", "stored", "workers", "trim"), JOINERS),
+    **dict.fromkeys(("compare", "live", "inbox", "simulate", "training"), JOINERS),
     "cli": CLI,
 }
 TOP_LEVEL = {"README.md", "DEVELOPERS.md", "pyproject.toml", "sigguard", "models", "tests", "synthetic"}

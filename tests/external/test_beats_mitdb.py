@@ -13,10 +13,10 @@ import numpy as np
 import pytest
 
 from sigguard.blocks import batches, plan_segments, rows_of
+from sigguard.collecting import merge_beats
 from sigguard.measure import between, prepare
 from sigguard.readers import open_recording
 from sigguard.readers.wfdb_files import quiet_wfdb
-from sigguard.segment_pass import merge_beats
 
 BEAT_SYMBOLS = set("NLRBAaJSVrFejnE/fQ?")
 

@@ -14,7 +14,7 @@ import pytest
 from simulated import leads_of, qrs_over_t, strips
 
 from sigguard.measure import analyse
-from sigguard.screening import shipped_model
+from sigguard.segment_pass import shipped_model
 from sigguard.segments import MEASUREMENTS
 from sigguard.simulate.disturbance import draw_disturbance
 

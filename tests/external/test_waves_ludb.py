@@ -22,7 +22,7 @@ import pytest
 from sigguard.global_values import analyse_global
 from sigguard.readers import open_recording
 from sigguard.readers.wfdb_files import quiet_wfdb
-from sigguard.screening import shipped_model
+from sigguard.segment_pass import shipped_model
 
 NAMES = ("pr", "qrs", "qt")
 LEADS = ("i", "ii", "iii", "avr", "avl", "avf", "v1", "v2", "v3", "v4", "v5", "v6")
