@@ -15,10 +15,12 @@ from functools import lru_cache
 import numpy as np
 from numpy.typing import NDArray
 from scipy import fft
+from scipy.ndimage import uniform_filter1d
 
 from sigguard import noise
 from sigguard.electrode_algebra import Algebra, algebra_of
 from sigguard.features import qrs_mask
+from sigguard.filters import low_pass
 from sigguard.measure import Analysis
 
 Floats = NDArray[np.float64]
@@ -28,6 +30,7 @@ WINDOW_S = 0.5  # short, so that a burst or a beat left over costs its own time 
 EDGE_S = 0.4  # at both ends the filters bend what they show
 HUM_LEAST_UV = 4.0  # amplitude in a lead below which no hum is traced to electrodes
 HUM_HARMONICS = 3
+HUM_FREE = 0.75  # share of the mains frequency up to which muscle noise is read beside hum
 MUSCLE_FS_HZ = 320.0  # enough for 150 Hz
 BEAT_VOTES = 1 / 3  # share of the leads that must see a beat for its time to be left out
 LEAST_OPEN = 0.3  # share of the time that must lie between beats, else beats stay in
@@ -93,8 +96,8 @@ def electrode_powers(
         for j, squares in enumerate(
             (
                 _wander(strip),
-                _motion(strip, residual[k, at]),
-                _muscle(strip, mains_hz[k, at]),
+                _motion(strip, residual[k, at], _hum_hz(mains_hz[k, at])),
+                _muscle(strip, _hum_hz(mains_hz[k, at])),
                 _hum(strip, mains_hz[k, at], mains_uv[k, at]),
             )
         ):
@@ -229,16 +232,31 @@ def _wander(strip: _Strip) -> Floats:
     return (wave @ wave.T / wave.shape[1])[None]
 
 
-def _motion(strip: _Strip, residual_mv: NDArray[np.floating]) -> Floats:
-    """0.5 to 35 Hz, the averaged beats taken off, between beats."""
-    return _windows(1e3 * (strip.algebra.to_potentials @ residual_mv), strip.keep, strip.length_s, EDGE_S)
-
-
-def _muscle(strip: _Strip, mains_hz: NDArray[np.floating]) -> Floats:
-    """20 to 150 Hz between beats, at about MUSCLE_FS_HZ, a mains line that some lead shows taken out."""
-    plain = strip.plain
+def _hum_hz(mains_hz: NDArray[np.floating]) -> float:
+    """The mains frequency that leads show, NaN if none does."""
     found = mains_hz[np.isfinite(mains_hz)]
-    gain = noise.muscle_gain(plain, float(np.median(found)) if found.size else np.nan)
+    return float(np.median(found)) if found.size else float("nan")
+
+
+def _motion(strip: _Strip, residual_mv: NDArray[np.floating], hum_hz: float) -> Floats:
+    """0.5 to 35 Hz, the averaged beats taken off, between beats; of hum, what the filter let through averaged away."""
+    potential = 1e3 * (strip.algebra.to_potentials @ residual_mv)
+    if np.isfinite(hum_hz):
+        width = max(1, round(potential.shape[1] / strip.length_s / hum_hz))  # a period: a zero at the line
+        potential = uniform_filter1d(potential, width, axis=1)
+    return _windows(potential, strip.keep, strip.length_s, EDGE_S)
+
+
+def _muscle(strip: _Strip, hum_hz: float) -> Floats:
+    """20 to 150 Hz between beats, at about MUSCLE_FS_HZ; where there is hum, only what lies below it.
+
+    The size is that of white noise over the whole band, whatever was looked at.
+    """
+    plain = strip.plain
+    gain = noise.muscle_gain(plain, float("nan"))
+    if np.isfinite(hum_hz):
+        below = gain * low_pass(plain.freq_hz, HUM_FREE * hum_hz, order=10)
+        gain = below * np.sqrt((gain**2).sum() / (below**2).sum())
     m = min(plain.n, fft.next_fast_len(int(plain.n * MUSCLE_FS_HZ / plain.fs_hz), real=True))
     bins = m // 2 + 1
     scale = (gain[:bins] * (m / plain.n)).astype(np.float32)

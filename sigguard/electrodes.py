@@ -53,8 +53,9 @@ LEAST_UV = {"wander": 60.0, "motion": 15.0, "muscle": 8.0, "mains": 4.0}  # belo
 # How often the electrode is the right one that stands out z-fold from the middle one: a logistic curve in log z,
 # fitted on the half of the hand-marked records and the noise that serve no test (the least noise that costs a grade).
 CONFIDENCE_SLOPE, CONFIDENCE_EVEN = 2.1, 6.0
-SURE, WORTH_SAYING = 0.5, 0.15
+SURE, WORTH_SAYING = 0.5, 0.1
 LEAST_STATED_UV = 6.0  # below, nothing is named even where something was lost
+HARMLESS_UV = 30.0  # below, nothing is named where nothing was lost
 ONE_BY_ONE = 0.6  # fit from which a disturbance is called that of single electrodes
 CHANCE = 0.05  # that a hum of any pattern looks like that of one electrode
 
@@ -92,19 +93,23 @@ def whose_noise(
 def worth_stating(electrodes: tuple[ElectrodeNoise, ...], *, lost: bool) -> tuple[ElectrodeNoise, ...]:
     """All of them if the first stands out, else none: a clean recording has no culprit.
 
-    Standing out is a confidence of at least one half or, where measurements were ``lost`` to something, of 0.15:
-    then the likeliest is worth looking at, with its confidence beside it.
+    Standing out is 30 µV and a confidence of at least one half or, where measurements were ``lost`` to something,
+    6 µV and 0.1: then the likeliest is worth looking at, with its confidence beside it.
     """
-    if not electrodes or electrodes[0].noise_uv < LEAST_STATED_UV:
+    least_uv, least = (LEAST_STATED_UV, WORTH_SAYING) if lost else (HARMLESS_UV, SURE)
+    if not electrodes or electrodes[0].noise_uv < least_uv:
         return ()
-    return electrodes if (electrodes[0].confidence or 0.0) >= (WORTH_SAYING if lost else SURE) else ()
+    return electrodes if (electrodes[0].confidence or 0.0) >= least else ()
 
 
 def _electrodes(
     names: tuple[str, ...], power: Floats, harm: Floats, fit: Floats
 ) -> tuple[ElectrodeNoise, ...]:
     score = harm.sum(axis=0)
-    sure = _confidence(score)
+    # what moves several electrodes together (a beat left over, breathing) is no electrode's own
+    strength = harm.sum(axis=1)
+    alone = float((strength * fit).sum() / max(strength.sum(), 1e-12))
+    sure = _confidence(score) * min(max((alone - 0.4) / (ONE_BY_ONE + 0.1 - 0.4), 0.0), 1.0)
     by_kind = [_confidence(power[k]) for k in range(len(KINDS))]
     out = []
     for i in np.argsort(-score, kind="stable"):
