@@ -9,6 +9,8 @@ from typing import Any, cast
 import numpy as np
 from numpy.typing import NDArray
 
+from sigguard.electrode_powers import ElectrodePowers
+from sigguard.lead_laws import LawBreak
 from sigguard.recording import RecordingInfo
 from sigguard.segment_pass import Part
 from sigguard.segments import Segments
@@ -29,6 +31,8 @@ class Collector:
     strips: list[Part] = field(
         default_factory=list
     )  # parts with values over all leads: short recordings only
+    powers: list[ElectrodePowers | None] = field(default_factory=list)
+    laws: list[tuple[LawBreak, ...]] = field(default_factory=list)
     _columns: dict[str, list[NDArray]] = field(default_factory=dict)
     _stored: dict[str, StoredRows] = field(default_factory=dict)
     _names: dict[str, Any] = field(default_factory=dict)
@@ -59,6 +63,8 @@ class Collector:
         self._common.append(_over_leads(part, self.info).astype(small))
         here = part.has_data
         self._has_data = here if self._has_data is None else self._has_data | here
+        self.powers.append(part.electrode_powers)
+        self.laws.append(part.law_breaks)
         if part.global_value is not None:
             self.strips.append(part)
 

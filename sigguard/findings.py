@@ -67,10 +67,35 @@ class PatientFirst:
 
 
 @dataclass(frozen=True, slots=True)
+class KindNoise:
+    """One kind of disturbance from one electrode: rms in µV, its share of this kind, and how sure that is."""
+
+    kind: str  # wander, motion, muscle, mains
+    noise_uv: float
+    share: float
+    confidence: float
+
+
+@dataclass(frozen=True, slots=True)
 class ElectrodeNoise:
-    """Disturbance that comes from one electrode: rms in µV and its share of all electrodes' power."""
+    """Disturbance that comes from one electrode: rms in µV and its share of all electrodes' power.
+
+    ``confidence``: how likely this is one of the electrodes to see to; None where it was not judged.
+    ``kinds``: the kinds that come from this electrode and from few others.
+    """
 
     electrode: str
+    noise_uv: float
+    share: float
+    confidence: float | None = None
+    kinds: tuple[KindNoise, ...] = ()
+
+
+@dataclass(frozen=True, slots=True)
+class CommonNoise:
+    """A disturbance that moves several electrodes together: rms in µV at an electrode, and the share that does."""
+
+    kind: str
     noise_uv: float
     share: float
 

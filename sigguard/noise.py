@@ -89,6 +89,15 @@ def wander(plain: PlainTransform) -> tuple[NDArray, NDArray, NDArray]:
     The mean is no wander, a drift from one end to the other is. What a row of T seconds cannot
     tell from a drift (below 1/T Hz) is counted as the drift it looks like. Flat: 0.
     """
+    wave = wander_wave_uv(plain)
+    n_out, duration_s = wave.shape[1], plain.n / plain.fs_hz
+    rms = np.sqrt((wave**2).mean(axis=1))
+    slope = np.abs(np.diff(wave, axis=1)).max(axis=1) * (n_out / duration_s)
+    return rms, wave.max(axis=1) - wave.min(axis=1), slope
+
+
+def wander_wave_uv(plain: PlainTransform) -> NDArray[np.float64]:
+    """Baseline wander below 0.5 Hz about its mean, (R, n_out) in µV on a coarse even grid of at least 64 points."""
     duration_s = plain.n / plain.fs_hz
     n_bins = min(int(np.ceil(WANDER_TOP_HZ * duration_s)) + 1, len(plain.freq_hz))
     low = plain.spectrum[:, :n_bins].astype(np.complex128)
@@ -97,10 +106,7 @@ def wander(plain: PlainTransform) -> tuple[NDArray, NDArray, NDArray]:
     wave = fft.irfft(low, n=n_out, axis=-1) * (n_out / plain.n)
     wave += plain.slope_mv[:, None] * (np.arange(n_out) / n_out - (n_out - 1) / (2 * n_out))
     wave -= wave.mean(axis=1, keepdims=True)
-    wave *= 1e3
-    rms = np.sqrt((wave**2).mean(axis=1))
-    slope = np.abs(np.diff(wave, axis=1)).max(axis=1) * (n_out / duration_s)
-    return rms, wave.max(axis=1) - wave.min(axis=1), slope
+    return wave * 1e3
 
 
 def top_hz(fs_hz: float, limit_hz: float = MUSCLE_TOP_HZ) -> float:
@@ -116,21 +122,27 @@ def muscle_band(plain: PlainTransform, mains_hz: NDArray[np.float64]) -> Rows:
     from 20 Hz to the top, whatever was taken out.
     """
     out = np.empty((len(plain.spectrum), plain.n), dtype=np.float32)
-    top = top_hz(plain.fs_hz)
-    band = beat_free(plain.freq_hz) * filters.low_pass(plain.freq_hz, top, order=8)
     for hz in (np.nan, *MAINS_HZ):
         rows = np.flatnonzero(np.isnan(mains_hz) if np.isnan(hz) else mains_hz == hz)
         if rows.size == 0:
             continue
-        gain = band if np.isnan(hz) else band * filters.notch(plain.freq_hz, hz)
-        passed = (gain**2).sum() * plain.freq_hz[1]
-        gain = gain * (1e3 * np.sqrt((top - MUSCLE_LOW_HZ) / passed))
+        gain = muscle_gain(plain, hz)
         if rows.size == len(out):
             return plain.band(gain)
         out[rows] = fft.irfft(
             plain.spectrum[rows] * gain.astype(np.float32), n=plain.n, axis=-1, overwrite_x=True
         )
     return out
+
+
+def muscle_gain(plain: PlainTransform, mains_hz: float) -> NDArray[np.float64]:
+    """Gain (n_bins,), mV to µV, of the muscle band without the mains line (NaN: none) and its harmonics; see muscle_band."""
+    top = top_hz(plain.fs_hz)
+    gain = beat_free(plain.freq_hz) * filters.low_pass(plain.freq_hz, top, order=8)
+    if not np.isnan(mains_hz):
+        gain = gain * filters.notch(plain.freq_hz, mains_hz)
+    passed = (gain**2).sum() * plain.freq_hz[1]
+    return gain * (1e3 * np.sqrt((top - MUSCLE_LOW_HZ) / passed))
 
 
 def beat_free(freq_hz: NDArray) -> NDArray[np.float64]:

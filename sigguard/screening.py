@@ -14,10 +14,12 @@ from sigguard import __version__
 from sigguard.advice import advise
 from sigguard.blocks import SegmentPlan, plan_segments
 from sigguard.collecting import Collector
-from sigguard.electrodes import electrode_noise
+from sigguard.electrode_powers import join_powers
+from sigguard.electrodes import whose_noise, worth_stating
 from sigguard.errors import UsageError
-from sigguard.findings import ElectrodeNoise, PatientFirst, Value
+from sigguard.findings import PatientFirst, Value
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
+from sigguard.lead_laws import law_findings, scale_notes, usual_breaks
 from sigguard.noise import MAINS_HZ
 from sigguard.patient_first import MARGIN_S, cut_findings, find_patient_first, join_findings
 from sigguard.profile import Profile, choose_profile, load_profile
@@ -27,12 +29,13 @@ from sigguard.reliability import LEARNED_FAULTS
 from sigguard.report.document import Report
 from sigguard.rhythm_shape import grid_samples
 from sigguard.segment_pass import Part, Progress, Source, measure_all, shipped_model
-from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS, UNITS, Segments
+from sigguard.segments import ABSENT, FAULTS, GRADES, MEASUREMENTS, UNITS, Segments
 from sigguard.verdicts import silence_under
 from sigguard.workers import Reopen, Workers
 
 ALARM_BLOCK_S = 600.0
 LEAST_ALARM_BLOCKS = 6
+ALL_GRADE = GRADES.index("all")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -165,7 +168,9 @@ def screen(
     handed = _global_measurements(collected.strips, info, plan)
     values, st_by_lead = combine_values(segments, handed, fridericia=options.fridericia)
     summaries = lead_summaries(segments)
-    electrodes = _electrodes(collected.strips, info)
+    powers = join_powers(collected.powers)
+    electrodes, common = whose_noise(powers)
+    laws = usual_breaks(collected.laws)
     judgement = judge(profile, segments, values, st_by_lead, alarms, summaries=summaries)
     return Report(
         software_version=__version__,
@@ -178,7 +183,10 @@ def screen(
         st_by_lead=st_by_lead,
         lead_summaries=summaries,
         segments=segments,
-        electrodes=tuple(electrodes),
+        electrodes=worth_stating(electrodes, lost=bool((segments.grade < ALL_GRADE).any())),
+        common_noise=common,
+        electrode_powers=powers,
+        placement=law_findings(laws),
         patient_first=tuple(alarms),
         advice=tuple(advise(segments, summaries, electrodes=electrodes, patient_first=alarms)),
         spans=spans(segments, info.duration_s),
@@ -186,6 +194,7 @@ def screen(
         beats=collected.beats(),
         lead_beats=dict(zip(info.leads, beats, strict=True)),
         procedure_note=PROCEDURE_NOTE,
+        notes=scale_notes(laws),
     )
 
 
@@ -256,14 +265,6 @@ def _alarms(
     return cut_findings(
         found, offset_s=first / info.fs_hz, start_s=start / info.fs_hz, end_s=stop / info.fs_hz
     )
-
-
-def _electrodes(parts: Sequence[Part], info: RecordingInfo) -> list[ElectrodeNoise]:
-    residual = [part.residual_mv for part in parts if part.residual_mv is not None]
-    if not residual:
-        return []
-    laid_out = [part.transpose(1, 0, 2).reshape(info.n_leads, -1) for part in residual]
-    return electrode_noise(np.concatenate(laid_out, axis=1).astype(np.float64), info.leads)
 
 
 def _global_measurements(

@@ -11,9 +11,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.blocks import Batch, SegmentPlan, batches, rows_of
+from sigguard.electrode_powers import ElectrodePowers, electrode_powers
 from sigguard.features import FEATURE_NAMES
 from sigguard.global_values import GLOBAL_FEATURE_NAMES, analyse_global
 from sigguard.grading import grade_rows
+from sigguard.lead_laws import LawBreak, law_breaks
 from sigguard.measure import Analysis, analyse
 from sigguard.profile import Profile
 from sigguard.recording import RecordingInfo
@@ -56,7 +58,8 @@ class Part:
     global_reliable: NDArray[np.bool_] | None
     global_absent: NDArray[np.int8] | None
     lead_weight: NDArray[np.float64] | None  # (n_segments, n_leads)
-    residual_mv: NDArray[np.float32] | None  # (n_segments, n_leads, n)
+    electrode_powers: ElectrodePowers | None
+    law_breaks: tuple[LawBreak, ...]
     has_data: NDArray[np.bool_]  # (n_leads,): at least one sample here
 
 
@@ -148,7 +151,18 @@ def _measure_batch(
     strips = n_leads > 1 and info.duration_s <= GLOBAL_MOST_S
     common = _global_part(rows, batch, analysis, model, profile, plan, fs_hz, n_leads) if strips else {}
     segments = _table(info, plan, batch, lead_index, analysis, model, profile, common.get("agree"))
-    residual = analysis.residual_mv.reshape(batch.count, n_leads, -1) if strips else None
+    core = rows[:, batch.margin[0] : rows.shape[1] - batch.margin[1]].reshape(batch.count, n_leads, -1)
+    hum = analysis.features[:, [FEATURE_NAMES.index("mains_hz"), FEATURE_NAMES.index("mains_uv")]]
+    powers = electrode_powers(
+        core,
+        fs_hz,
+        info.leads,
+        analysis,
+        start_s=segments.start_s[::n_leads],
+        end_s=segments.end_s[::n_leads],
+        mains_hz=hum[:, 0].reshape(batch.count, n_leads),
+        mains_uv=hum[:, 1].reshape(batch.count, n_leads),
+    )
     return Part(
         segments,
         lead_beats,
@@ -158,7 +172,8 @@ def _measure_batch(
         common.get("reliable"),
         common.get("absent"),
         common.get("weight"),
-        residual,
+        powers,
+        law_breaks(core.transpose(1, 0, 2).reshape(n_leads, -1), fs_hz, info.leads),
         np.asarray(np.isfinite(block_mv).any(axis=1)),
     )
 

@@ -13,10 +13,12 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from sigguard.electrode_powers import ElectrodePowers
 from sigguard.findings import (
     CAUTION,
     Advice,
     BestStrip,
+    CommonNoise,
     ElectrodeNoise,
     Judgement,
     LeadSummary,
@@ -55,6 +57,8 @@ class Report:
     lead_summaries: tuple[LeadSummary, ...]
     segments: SegmentTable | Segments
     electrodes: tuple[ElectrodeNoise, ...] = ()
+    common_noise: tuple[CommonNoise, ...] = ()
+    electrode_powers: ElectrodePowers | None = None  # by segment, for electrodes.whose_noise
     placement: tuple[Placement, ...] = ()
     patient_first: tuple[PatientFirst, ...] = ()
     advice: tuple[Advice, ...] = ()
@@ -112,14 +116,7 @@ class Report:
                 "st": {"by_lead": {clean(lead): _st_value(v) for lead, v in self.st_by_lead.items()}},
             },
             "leads": [_lead(summary) for summary in self.lead_summaries],
-            "electrodes": [
-                {
-                    "electrode": clean(e.electrode),
-                    "noise_uv": number(e.noise_uv, 1),
-                    "share": number(e.share, 3),
-                }
-                for e in self.electrodes
-            ],
+            "electrodes": [_electrode(e) for e in self.electrodes],
             "placement": [
                 {"finding": clean(p.finding), "probability": number(p.probability, 3), "text": clean(p.text)}
                 for p in self.placement
@@ -192,6 +189,26 @@ def number(x: float | None, decimals: int) -> float | None:
     if x is None or not isfinite(x):
         return None
     return round(float(x), decimals) + 0.0
+
+
+def _electrode(e: ElectrodeNoise) -> dict[str, Any]:
+    found: dict[str, Any] = {
+        "electrode": clean(e.electrode),
+        "noise_uv": number(e.noise_uv, 1),
+        "share": number(e.share, 3),
+    }
+    if e.confidence is not None:
+        found["confidence"] = number(e.confidence, 3)
+        found["kinds"] = [
+            {
+                "kind": k.kind,
+                "noise_uv": number(k.noise_uv, 1),
+                "share": number(k.share, 3),
+                "confidence": number(k.confidence, 3),
+            }
+            for k in e.kinds
+        ]
+    return found
 
 
 def _texts(words) -> list[str]:

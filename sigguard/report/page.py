@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeGuard
 
 from sigguard.findings import CAUTION, LeadSummary, Value
+from sigguard.report.body import body_svg, common_words, electrode_rows
 from sigguard.report.document import Report
 from sigguard.report.grademap import grade_map, legend_svg, map_svg
 from sigguard.report.strips import StripData, by_heading, strip_svg
@@ -104,7 +105,9 @@ def render_page(report: Report, strips: Sequence[StripData] = (), *, with_identi
             groups=[(head, [Markup(strip_svg(s)) for s in group]) for head, group in by_heading(strips)],
             whole=sum(s.end_s - s.start_s for s in strips) >= 0.9 * info.duration_s * info.n_leads,
             lead_rows=[_lead_row(summary) for summary in report.lead_summaries],
-            electrodes=[(e.electrode, _shown(e.noise_uv, 0), _percent(e.share)) for e in report.electrodes],
+            electrodes=electrode_rows(report.electrodes),
+            common=common_words(report.common_noise),
+            body=Markup(body_svg(info.leads, report.electrodes, report.common_noise)),
             placement=[(p.text, _percent(p.probability)) for p in report.placement],
             identity=info.identity if with_identity else (),
         )
