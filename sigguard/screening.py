@@ -17,11 +17,12 @@ from sigguard.blocks import SegmentPlan, plan_segments
 from sigguard.electrodes import electrode_noise
 from sigguard.errors import UsageError
 from sigguard.features import FEATURE_NAMES
-from sigguard.findings import ElectrodeNoise, PatientFirst, Value
+from sigguard.findings import ElectrodeNoise, PatientFirst, Placement, Value
 from sigguard.global_values import GLOBAL_FEATURE_NAMES
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
 from sigguard.noise import MAINS_HZ
 from sigguard.patient_first import MARGIN_S, cut_findings, find_patient_first, join_findings
+from sigguard.placement import find_placement
 from sigguard.profile import Profile, choose_profile, load_profile
 from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
@@ -164,6 +165,7 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
     values, st_by_lead = combine_values(segments, handed, fridericia=options.fridericia)
     summaries = lead_summaries(segments)
     electrodes = _electrodes(parts, info)
+    placement = _placement(parts, segments, alarms)
     judgement = judge(profile, segments, values, st_by_lead, alarms, summaries=summaries)
     return Report(
         software_version=__version__,
@@ -177,8 +179,11 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
         lead_summaries=summaries,
         segments=segments,
         electrodes=tuple(electrodes),
+        placement=placement,
         patient_first=tuple(alarms),
-        advice=tuple(advise(segments, summaries, electrodes=electrodes, patient_first=alarms)),
+        advice=tuple(
+            advise(segments, summaries, electrodes=electrodes, patient_first=alarms, placement=placement)
+        ),
         spans=spans(segments, info.duration_s),
         best_strip=best_strip(segments, info.leads, every=profile.name == "resting"),
         beats=_beats_over_leads(parts, beats, info),
@@ -262,6 +267,21 @@ def _electrodes(parts: Sequence[Part], info: RecordingInfo) -> list[ElectrodeNoi
         return []
     laid_out = [part.transpose(1, 0, 2).reshape(info.n_leads, -1) for part in residual]
     return electrode_noise(np.concatenate(laid_out, axis=1).astype(np.float64), info.leads)
+
+
+def _placement(
+    parts: Sequence[Part], segments: Segments, alarms: Sequence[PatientFirst]
+) -> tuple[Placement, ...]:
+    """Misplaced electrodes, from the segment in which most leads have a reliable QRS; none under an alarm."""
+    beats = [part.global_beat_mv for part in parts if part.global_beat_mv is not None]
+    marks = [part.global_marks_ms for part in parts if part.global_marks_ms is not None]
+    if not beats or alarms:
+        return ()
+    fit = segments.reliable[:, MEASUREMENTS.index("rate")].reshape(-1, len(segments.leads))
+    best = int(fit.sum(axis=1).argmax())
+    return find_placement(
+        np.concatenate(beats)[best], np.concatenate(marks)[best], segments.leads, fit=fit[best]
+    )
 
 
 def _global_measurements(

@@ -55,6 +55,8 @@ class Part:
     global_absent: NDArray[np.int8] | None
     lead_weight: NDArray[np.float64] | None  # (n_segments, n_leads)
     residual_mv: NDArray[np.float32] | None  # (n_segments, n_leads, n)
+    global_beat_mv: NDArray[np.float32] | None  # (n_segments, n_leads, LENGTH), about the common beat
+    global_marks_ms: NDArray[np.float64] | None  # (n_segments, 5)
 
 
 def measure_all(
@@ -113,6 +115,8 @@ def _measure_batch(
         common.get("absent"),
         common.get("weight"),
         residual,
+        common.get("beat_mv"),
+        common.get("marks_ms"),
     )
 
 
@@ -187,6 +191,8 @@ def _global_part(
         "reliable": model.reliable_global(scores, tolerances(profile)[1:4].tolist()) & has,
         "absent": found.absent,
         "weight": found.weight,
+        "beat_mv": found.beat_mv,
+        "marks_ms": found.marks_ms,
         "agree": agreeing_leads(analysis, found.beat_strip, found.beat_s, n_leads, batch.size / fs_hz),
     }
 
