@@ -9,6 +9,7 @@ and sets of leads that cannot tell.
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -26,6 +27,7 @@ from sigguard.placement_model import (
     limb_features,
     part_columns,
     probabilities,
+    ready_judge,
     restoring,
     shipped_placement_model,
 )
@@ -84,9 +86,10 @@ def _copies(beat: Floats, row_of: dict[str, int]) -> list[tuple[str, str]]:
     """Pairs of leads that are one signal."""
     names = list(row_of)
     x = beat[[row_of[name] for name in names]]
-    apart = np.sqrt(((x[:, None] - x[None]) ** 2).mean(axis=2))
-    size = np.sqrt((x**2).mean(axis=1))
-    same = apart < COPY * np.maximum(size[:, None], size[None])
+    power = x @ x.T
+    own = np.diag(power)
+    apart2 = own[:, None] + own - 2 * power
+    same = apart2 < COPY**2 * np.maximum(own[:, None], own)
     return [(names[i], names[j]) for i, j in zip(*np.nonzero(np.triu(same, 1)), strict=True)]
 
 
@@ -96,11 +99,10 @@ def _limb_potentials(
     """((3, LENGTH) potentials of RA, LA, LL about their mean, name of an inverted lead); None where not to be had."""
     if not limb:
         return None, None
-    rows = LEAD_FROM_ELECTRODES[[LEADS_12.index(name) for name in limb], :3]
-    if np.linalg.matrix_rank(rows) < 2:
+    to_limbs, outside = _limb_algebra(tuple(limb))
+    if to_limbs is None:
         return None, None
     x = beat[[row_of[name] for name in limb]]
-    outside = np.eye(len(limb)) - rows @ np.linalg.pinv(rows)
     power = x @ x.T
     signs = np.concatenate([np.ones((1, len(limb))), 1.0 - 2.0 * np.eye(len(limb))])
     left = np.sqrt(np.maximum(np.einsum("hi,ij,hj,ij->h", signs, power, signs, outside), 0) / np.trace(power))
@@ -111,7 +113,16 @@ def _limb_potentials(
         x = x * signs[best][:, None]
     if inverted is None and left[0] > BROKEN:
         return None, None
-    return np.linalg.pinv(rows) @ x, inverted
+    return to_limbs @ x, inverted
+
+
+@lru_cache(maxsize=16)
+def _limb_algebra(limb: tuple[str, ...]) -> tuple[Floats | None, Floats]:
+    """(limb leads → RA, LA, LL about their mean, None where they do not tell; projection onto what breaks the sums)."""
+    rows = LEAD_FROM_ELECTRODES[[LEADS_12.index(name) for name in limb], :3]
+    inverse = np.asarray(np.linalg.pinv(rows), dtype=np.float64)
+    told = np.linalg.matrix_rank(rows) >= 2
+    return (inverse if told else None), np.eye(len(limb)) - rows @ inverse
 
 
 def _weigh(
@@ -130,7 +141,7 @@ def _weigh(
             seen[2 + int(name[1])] = beat[row_of[name]]
             use[2 + int(name[1])] = True
     columns, has_p = part_columns(marks_ms), bool(np.isfinite(marks_ms[0]))
-    judge = model.usual.judge(use, has_p)
+    judge = ready_judge(model.usual, use, has_p)
     weight = model.limb_weight if use[3:].any() else model.limb_alone_weight
     chance = probabilities(limb_features(seen, columns, judge), weight)
     best = int(chance.argmax())

@@ -14,7 +14,7 @@ Electrodes follow ``electrodes.ELECTRODES``, potentials are against Wilson's ter
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
-from functools import cache
+from functools import cache, lru_cache
 from io import BytesIO
 
 import numpy as np
@@ -202,7 +202,7 @@ class Usual:
         parts = np.repeat(use, N_PARTS).reshape(N, N_PARTS)
         parts[:, WAVES[0]] &= has_p
         keep = np.flatnonzero(parts.ravel())
-        precision: Floats = np.linalg.inv(self.covariance[np.ix_(keep, keep)])
+        precision = np.asarray(np.linalg.inv(self.covariance[np.ix_(keep, keep)]), dtype=np.float64)
         at = np.flatnonzero(use)
         power = self.power[:, at][:, :, at]
         level = np.einsum("wii->w", power) / len(at)
@@ -236,6 +236,16 @@ class Judge:
         """(n, 5) logistic scores of the neighbouring chest leads, positive in the usual order; 0 where one is missing."""
         score = np.einsum("npf,pf->np", pair_differences(shapes, self.use), self.usual.pair_weight)
         return np.clip(np.where(self.use[_A] & self.use[_B], score, 0.0), -PAIR_MOST, PAIR_MOST)
+
+
+@lru_cache(maxsize=8)
+def _ready(usual: Usual, use: tuple[bool, ...], has_p: bool) -> Judge:
+    return usual.judge(np.array(use), has_p)
+
+
+def ready_judge(usual: Usual, use: NDArray[np.bool_], has_p: bool) -> Judge:
+    """As ``usual.judge``, kept from one recording to the next: most have the same leads."""
+    return _ready(usual, tuple(use.tolist()), has_p)
 
 
 def limb_features(seen_mv: Floats, columns: list[tuple[int, int]], judge: Judge) -> Floats:
