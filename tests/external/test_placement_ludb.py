@@ -2,7 +2,7 @@
 
 Source of truth: lead algebra applied to the Lobachevsky University records (taken to be rightly placed); a wire on the right
 leg sees the left leg's potential but for 3 to 8 % of the flattened lead. Each record goes through the whole check with a
-model that never saw its subject (five folds). "Found": probability of at least one half under the right name.
+model that never saw its subject (five folds; some minutes). "Found": probability of at least one half under the right name.
 The constants of the training were chosen on these folds too (seed 0); other seeds of the split are given by the script:
 
     python -m tests.external.test_placement_ludb DATA_FOLDER [SEED] [--inverted]
@@ -103,7 +103,9 @@ def test_limb_swaps_are_found(seen: list[Seen]) -> None:
 
 def test_neighbouring_chest_swaps_are_found(seen: list[Seen]) -> None:
     share = found_share(seen)
-    assert np.mean([share[name] for name in CHEST_HYPOTHESES[1:6]]) >= 0.90, share
+    pairs = [share[name] for name in CHEST_HYPOTHESES[1:6]]
+    assert np.mean(pairs) >= 0.90, share
+    assert min(pairs) >= 0.87, share  # 0.90 less one standard error of a hundred subjects
 
 
 def test_sinus_rhythm_rightly_placed_is_left_alone(seen: list[Seen]) -> None:
