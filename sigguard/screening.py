@@ -17,11 +17,12 @@ from sigguard.collecting import Collector
 from sigguard.electrode_powers import join_powers
 from sigguard.electrodes import whose_noise, worth_stating
 from sigguard.errors import UsageError
-from sigguard.findings import PatientFirst, Value
+from sigguard.findings import PatientFirst, Placement, Value
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
 from sigguard.lead_laws import law_findings, scale_notes, usual_breaks
 from sigguard.noise import MAINS_HZ
 from sigguard.patient_first import MARGIN_S, cut_findings, find_patient_first, join_findings
+from sigguard.placement import find_placement
 from sigguard.profile import Profile, choose_profile, load_profile
 from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
@@ -171,6 +172,7 @@ def screen(
     powers = join_powers(collected.powers)
     electrodes, common = whose_noise(powers)
     laws = usual_breaks(collected.laws)
+    misplaced = _placement(collected.strips, segments, alarms)
     judgement = judge(profile, segments, values, st_by_lead, alarms, summaries=summaries)
     return Report(
         software_version=__version__,
@@ -186,9 +188,11 @@ def screen(
         electrodes=worth_stating(electrodes, lost=bool((segments.grade < ALL_GRADE).any())),
         common_noise=common,
         electrode_powers=powers,
-        placement=law_findings(laws),
+        placement=(*misplaced, *law_findings(laws)),
         patient_first=tuple(alarms),
-        advice=tuple(advise(segments, summaries, electrodes=electrodes, patient_first=alarms)),
+        advice=tuple(
+            advise(segments, summaries, electrodes=electrodes, patient_first=alarms, placement=misplaced)
+        ),
         spans=spans(segments, info.duration_s),
         best_strip=best_strip(segments, info.leads, every=profile.name == "resting"),
         beats=collected.beats(),
@@ -264,6 +268,21 @@ def _alarms(
     )
     return cut_findings(
         found, offset_s=first / info.fs_hz, start_s=start / info.fs_hz, end_s=stop / info.fs_hz
+    )
+
+
+def _placement(
+    parts: Sequence[Part], segments: Segments, alarms: Sequence[PatientFirst]
+) -> tuple[Placement, ...]:
+    """Misplaced electrodes, from the segment in which most leads have a reliable QRS; none under an alarm."""
+    beats = [part.global_beat_mv for part in parts if part.global_beat_mv is not None]
+    marks = [part.global_marks_ms for part in parts if part.global_marks_ms is not None]
+    if not beats or alarms:
+        return ()
+    fit = segments.reliable[:, MEASUREMENTS.index("rate")].reshape(-1, len(segments.leads))
+    best = int(fit.sum(axis=1).argmax())
+    return find_placement(
+        np.concatenate(beats)[best], np.concatenate(marks)[best], segments.leads, fit=fit[best]
     )
 
 

@@ -61,6 +61,8 @@ class Part:
     electrode_powers: ElectrodePowers | None
     law_breaks: tuple[LawBreak, ...]
     has_data: NDArray[np.bool_]  # (n_leads,): at least one sample here
+    global_beat_mv: NDArray[np.float32] | None  # (n_segments, n_leads, LENGTH), about the common beat
+    global_marks_ms: NDArray[np.float64] | None  # (n_segments, 5)
 
 
 def measure_all(
@@ -175,6 +177,8 @@ def _measure_batch(
         powers,
         law_breaks(core.transpose(1, 0, 2).reshape(n_leads, -1), fs_hz, info.leads),
         np.asarray(np.isfinite(block_mv).any(axis=1)),
+        common.get("beat_mv"),
+        common.get("marks_ms"),
     )
 
 
@@ -249,5 +253,7 @@ def _global_part(
         "reliable": model.reliable_global(scores, tolerances(profile)[1:4].tolist()) & has,
         "absent": found.absent,
         "weight": found.weight,
+        "beat_mv": found.beat_mv,
+        "marks_ms": found.marks_ms,
         "agree": agreeing_leads(analysis, found.beat_strip, found.beat_s, n_leads, batch.size / fs_hz),
     }
