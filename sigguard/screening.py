@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
-from functools import cache
+from functools import cache, reduce
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +17,7 @@ from sigguard.blocks import SegmentPlan, plan_segments
 from sigguard.electrodes import electrode_noise
 from sigguard.errors import UsageError
 from sigguard.features import FEATURE_NAMES
-from sigguard.findings import ElectrodeNoise, PatientFirst, Value
+from sigguard.findings import ElectrodeNoise, PatientFirst, Value, under_alarm
 from sigguard.global_values import GLOBAL_FEATURE_NAMES
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
 from sigguard.noise import MAINS_HZ
@@ -27,6 +27,7 @@ from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
 from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
 from sigguard.report.document import Report
+from sigguard.rhythm_gaps import Contact, at_rest, contact
 from sigguard.rhythm_shape import grid_samples
 from sigguard.segment_pass import Part, Progress, Source, joined_tables, measure_all, merge_beats
 from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS, UNITS, Segments
@@ -201,10 +202,9 @@ def _silenced(segments: Segments, alarms: Sequence[PatientFirst]) -> Segments:
     reliable = silence_under(segments.reliable, segments.start_s, segments.end_s, stretches)
     # A rhythm that may kill is not to be read as noise: what the classifiers call by name is not named here.
     fault = segments.fault.copy()
-    under = np.any(
-        [(segments.start_s < last) & (segments.end_s > first) for first, last, _ in stretches], axis=0
-    )
-    fault[np.ix_(under, [FAULTS.index(name) for name in LEARNED_FAULTS])] = 0.0
+    under = under_alarm(alarms, segments.start_s, segments.end_s)
+    for name in LEARNED_FAULTS:
+        fault[under, FAULTS.index(name)] = 0.0
     return replace(segments, reliable=reliable, fault=fault, grade=grade_rows(reliable, segments.absent))
 
 
@@ -233,10 +233,16 @@ def _patient_first(source: Source, beats: Sequence[NDArray[np.int64]]) -> list[P
     grid = grid_samples(info.fs_hz)
     size = max(1, int(ALARM_BLOCK_S * info.fs_hz) // grid) * grid
     margin = int(np.ceil(MARGIN_S * info.fs_hz / grid)) * grid
-    has_data = np.zeros(info.n_leads, dtype=bool)
+    has_data, rests, noise = np.zeros(info.n_leads, dtype=bool), False, None
+    no_lead = np.zeros(info.n_leads, dtype=bool)
+    starts = range(0, info.n_samples, size)
     if info.n_samples > size:
-        for start in range(0, info.n_samples, size):
-            has_data |= np.isfinite(source.read(start, min(start + size, info.n_samples))).any(axis=1)
+        for start in starts:
+            block = source.read(start, min(start + size, info.n_samples))
+            has_data |= np.isfinite(block).any(axis=1)
+            rests = rests or bool(at_rest(block, info.fs_hz).any())
+        if rests:  # how noisy the leads are matters only where one of them does not move
+            noise = _contact(source, starts)
     found: list[PatientFirst] = []
     for start in range(0, info.n_samples, size):
         first, last = max(0, start - margin), min(info.n_samples, start + size + margin)
@@ -248,12 +254,19 @@ def _patient_first(source: Source, beats: Sequence[NDArray[np.int64]]) -> list[P
                 info.leads,
                 lead_beats_s=[(at[(at >= first) & (at < last)] - first) / info.fs_hz for at in beats],
                 lead_has_data=has_data.tolist() if info.n_samples > size else None,
+                rest_tells=noise.rest_tells if noise else no_lead if info.n_samples > size else None,
             ),
             offset_s=first / info.fs_hz,
             start_s=start / info.fs_hz,
             end_s=min(start + size, info.n_samples) / info.fs_hz,
         )
     return join_findings(found)
+
+
+def _contact(source: Source, starts: range) -> Contact:
+    fs_hz, n = source.info.fs_hz, source.info.n_samples
+    parts = (contact(source.read(start, min(start + starts.step, n)), fs_hz) for start in starts)
+    return reduce(Contact.also, parts)
 
 
 def _electrodes(parts: Sequence[Part], info: RecordingInfo) -> list[ElectrodeNoise]:
