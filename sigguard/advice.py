@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.electrodes import ELECTRODES, lead_rows
-from sigguard.findings import Advice, ElectrodeNoise, LeadSummary, PatientFirst, Placement
+from sigguard.findings import Advice, ElectrodeNoise, LeadSummary, PatientFirst, Placement, under_alarm
 from sigguard.grading import FAULT_WORDS
 from sigguard.segments import FAULTS, MEASUREMENTS, Segments
 from sigguard.spans import lost
@@ -78,9 +78,7 @@ def advise(
 def _loss(segments: Segments, patient_first: Sequence[PatientFirst]) -> tuple[NDArray[np.float64], float]:
     """(n_leads, 10) measurement-seconds lost by lead and main fault (last: none called), and all there are."""
     length_s = segments.end_s - segments.start_s
-    counts = np.ones(len(segments), bool)
-    for p in patient_first:
-        counts &= ~((segments.start_s < p.end_s) & (segments.end_s > p.start_s))
+    counts = ~under_alarm(patient_first, segments.start_s, segments.end_s)
     fault = segments.fault.copy()
     main = np.where(fault.any(axis=1), 0, _UNEXPLAINED)
     direct = fault.copy()

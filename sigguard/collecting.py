@@ -33,6 +33,7 @@ class Collector:
     )  # parts with values over all leads: short recordings only
     powers: list[ElectrodePowers | None] = field(default_factory=list)
     laws: list[tuple[LawBreak, ...]] = field(default_factory=list)
+    rests: bool = False  # a lead does not move for a while somewhere
     _columns: dict[str, list[NDArray]] = field(default_factory=dict)
     _stored: dict[str, StoredRows] = field(default_factory=dict)
     _names: dict[str, Any] = field(default_factory=dict)
@@ -63,6 +64,7 @@ class Collector:
         self._common.append(_over_leads(part, self.info).astype(small))
         here = part.has_data
         self._has_data = here if self._has_data is None else self._has_data | here
+        self.rests = self.rests or part.rests
         self.powers.append(part.electrode_powers)
         self.laws.append(part.law_breaks)
         if part.global_value is not None:

@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
 
 CAUTION = (
     "Screening aid, no diagnosis. Look at the patient, not at the tracing alone; "
@@ -135,3 +139,17 @@ class Judgement:
 
     verdict: str  # accept, accept-in-part, repeat
     reasons: tuple[str, ...] = field(default=())
+
+
+def under_alarm(
+    alarms: Iterable[PatientFirst], start_s: float | NDArray[np.floating], end_s: float | NDArray[np.floating]
+) -> NDArray[np.bool_]:
+    """Whether a patient-first stretch lies on any part of the time from start to end, s; of scalars or arrays alike.
+
+    Time under an alarm is kept and shown whatever its grade: nothing of it may be called noise or cut.
+    """
+    start, end = np.broadcast_arrays(start_s, end_s)
+    out = np.zeros(start.shape, dtype=bool)
+    for alarm in alarms:
+        out |= (start < alarm.end_s) & (end > alarm.start_s)
+    return out

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.combining import combine_values
-from sigguard.findings import Judgement, LeadSummary, PatientFirst, Value
+from sigguard.findings import Judgement, LeadSummary, PatientFirst, Value, under_alarm
 from sigguard.profile import Profile, Rule
 from sigguard.segments import ABSENT, FAULTS, GRADES, MEASUREMENTS, UNITS, Segments
 from sigguard.spans import (
@@ -108,7 +108,7 @@ def judge(
         return Judgement("repeat", (*alarms, "No segment could be checked."))
     verdict, reasons = _by_rules(profile, segments, values, st_by_lead, summaries)
     if alarms and verdict != "accept":
-        rest = segments.rows(~_under(segments, patient_first))
+        rest = segments.rows(~under_alarm(patient_first, segments.start_s, segments.end_s))
         if not len(rest):
             kept = "All of it lies under a patient-first stretch: keep it, see to the patient, then record again."
             return Judgement(verdict, (*alarms, kept))
@@ -131,13 +131,6 @@ def _alarm_reasons(patient_first: Sequence[PatientFirst]) -> list[str]:
     return texts + (
         [f"{more} more such stretches."] if more > 1 else ["One more such stretch."] if more else []
     )
-
-
-def _under(segments: Segments, patient_first: Sequence[PatientFirst]) -> NDArray[np.bool_]:
-    under = np.zeros(len(segments), bool)
-    for p in patient_first:
-        under |= (segments.start_s < p.end_s) & (segments.end_s > p.start_s)
-    return under
 
 
 def _by_rules(

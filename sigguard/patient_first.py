@@ -17,20 +17,23 @@ from numpy.typing import NDArray
 
 from sigguard.findings import PatientFirst
 from sigguard.rhythm_beats import Train, find_trains
-from sigguard.rhythm_shape import WINDOW_S, Work, prepare, shape_indices
-from sigguard.vf_score import fibrillation_score
+from sigguard.rhythm_gaps import at_rest, beats_as_before, beats_beneath, contact
+from sigguard.rhythm_shape import SHAPE_NAMES, WINDOW_S, Work, prepare, shape_indices
+from sigguard.vf_score import SMALLEST_RMS_MV, fibrillation_score
 
 Floats = NDArray[np.floating]
 Bools = NDArray[np.bool_]
 
-MARGIN_S = 15.0  # blocks with this much more on both sides find what the whole finds
-# log odds above which a window counts as fibrillation or flutter; of simulated ones 0.5 % stay below
-SCORE_LIMIT = -0.5
-SMALLEST_RMS_MV = 0.025  # below, a wavy line is taken as standstill and not as fibrillation
+MARGIN_S = 30.0  # blocks with this much more on both sides find what the whole finds
+# log odds above which a window counts as fibrillation or flutter: alone, or on average with both its neighbours
+SURE_LIMIT = 1.0
+LASTING_LIMIT = 0.0
+HOLD_S = 15.0  # an alarm goes on over so long without one where no lead shows a steady rhythm
 FAST_RR_S = 0.505  # mean RR of 120/min, with 1 % for rounding to samples
 WIDE_MS = 120.0
 STEADY_RR_S = 0.33  # a plausible steady rhythm stays below 180/min,
-STEADY_SCORE = -2.0  # and does not look half like fibrillation
+STEADY_SCORE = -2.0  # does not look half like fibrillation,
+STEADY_FULLNESS = 0.8  # and rests between its beats: a sine has 0.9 (rhythm_shape), narrow beats under 0.5
 SLOW_RR_S = 0.6
 MOST = 0.6  # share of a window's beats that must be wide, or alike
 WIDE_FAST_S = 10.0
@@ -69,13 +72,15 @@ def find_patient_first(
     lead_beats_s: Sequence[Floats],
     qrs_ms: Sequence[Floats] | None = None,
     lead_has_data: Sequence[bool] | Bools | None = None,
+    rest_tells: Bools | None = None,
 ) -> list[PatientFirst]:
     """Stretches that need a look at the patient, in order of time.
 
     ``x_mv`` (n_leads, n_samples), mV, NaN where missing. ``lead_beats_s`` holds for each lead the times of
     the beats the ordinary detector found, in s from the start of ``x_mv``; they may be wrong. ``qrs_ms``:
     for each lead the QRS duration of each of those beats, NaN where unknown. ``lead_has_data``: for each
-    lead whether any sample of it exists in the whole recording, where ``x_mv`` is a part.
+    lead whether any sample of it exists in the whole recording, where ``x_mv`` is a part; ``rest_tells``: what
+    ``rhythm_gaps.contact`` says of the whole recording.
 
     Missing samples are no standstill, unless no lead holds data at all. A recording under 3 s gives an
     empty list; one under 4 s can only show standstill.
@@ -87,11 +92,16 @@ def find_patient_first(
     has_data = np.isfinite(x).any(axis=1) if lead_has_data is None else np.asarray(lead_has_data, dtype=bool)
     if not has_data.any():
         return [_finding(leads, range(len(leads)), 0.0, duration_s, "standstill")]
-    work = prepare(x, fs_hz)
+    rest = at_rest(x, fs_hz)
+    if rest.any():
+        rest &= (contact(x, fs_hz).rest_tells if rest_tells is None else rest_tells)[:, None]
+    work = prepare(x, fs_hz, lost=rest)
     shape, rms_mv = shape_indices(work)
-    states = _judge(work, fibrillation_score(shape), rms_mv, lead_beats_s, qrs_ms)
+    states = _judge(work, shape, rms_mv, lead_beats_s, qrs_ms)
     cleared = np.any(states.steady, axis=0)
-    found = _runs(states.wavy & ~cleared, work, leads, "fibrillation-or-flutter", 1)
+    wavy = states.wavy & ~cleared
+    held = _held(np.any(wavy, axis=0), cleared, round(HOLD_S * work.fs_hz / work.step))
+    found = _runs(wavy, work, leads, "fibrillation-or-flutter", 1, within=held)
     found += _runs(_wide_fast_anywhere(states), work, leads, "wide-fast", _windows_in(WIDE_FAST_S, work))
     found += _standstill_findings(states, work, leads)
     return sorted(found, key=lambda f: (f.start_s, f.end_s, f.pattern))
@@ -135,14 +145,15 @@ def _windows_in(span_s: float, work: Work) -> int:
 
 
 def _judge(
-    work: Work, score: Floats, rms_mv: Floats, lead_beats_s: Sequence[Floats], qrs_ms: Sequence[Floats] | None
+    work: Work, shape: Floats, rms_mv: Floats, lead_beats_s: Sequence[Floats], qrs_ms: Sequence[Floats] | None
 ) -> _States:
+    score, fullness = fibrillation_score(shape), shape[..., SHAPE_NAMES.index("fullness")]
     own, given = find_trains(work, lead_beats_s)
     trains = (own,) if given is own else (own, given)
     begin = np.arange(score.shape[1]) * work.step
     there = _presence(work)
     usable = there[:, begin + work.length] - there[:, begin] >= 0.5 * work.length if begin.size else score > 0
-    wavy = usable & (score > SCORE_LIMIT) & (rms_mv >= SMALLEST_RMS_MV)
+    wavy = looks_wavy(np.where(usable & (rms_mv >= SMALLEST_RMS_MV), score, -np.inf))
     tables = [_window_table(train, work, begin) for train in trains]
     wide_fast = usable & np.any([t.fast & t.wide & t.alike for t in tables], axis=0)
     if qrs_ms is not None:
@@ -150,9 +161,26 @@ def _judge(
             [_reported_wide(t, q, begin / work.fs_hz) for t, q in zip(lead_beats_s, qrs_ms, strict=True)]
         )
         wide_fast |= usable & tables[-1].fast & tables[-1].alike & reported
-    steady = usable & (score < STEADY_SCORE) & ~wide_fast & np.any([t.steady for t in tables], axis=0)
+    regular = usable & (score < STEADY_SCORE) & (fullness < STEADY_FULLNESS)
+    steady = regular & ~wide_fast & np.any([t.steady for t in tables], axis=0)
     slow = steady & np.any([t.steady & t.slow for t in tables], axis=0)
     return _States(wavy, wide_fast, steady, slow, _quiet(work, trains))
+
+
+def looks_wavy(score: Floats, *, sure: float = SURE_LIMIT, lasting: float = LASTING_LIMIT) -> Bools:
+    """(n_leads, n_windows) log odds, -inf where none → windows that look like fibrillation or flutter.
+
+    A window far above the limit counts alone: four seconds fill but one. Else three in a row decide together.
+    """
+    if score.shape[1] < 3:  # short recordings
+        return (score > sure) | (score > lasting).all(axis=1, keepdims=True)
+    three = np.full_like(score, -np.inf)
+    three[:, 1:-1] = (score[:, :-2] + score[:, 1:-1] + score[:, 2:]) / 3
+    mean = three > lasting
+    out: Bools = (score > sure) | mean
+    out[:, :-1] |= mean[:, 1:]
+    out[:, 1:] |= mean[:, :-1]
+    return out
 
 
 def _presence(work: Work) -> Floats:
@@ -204,22 +232,35 @@ def _reported_wide(beats_s: Floats, qrs_ms: Floats, starts_s: Floats) -> Bools:
 def _quiet(work: Work, trains: Sequence[Train]) -> Bools:
     """(n_leads, n): stretches of STANDSTILL_S or more, present, without anything that may be a beat."""
     n_leads, n = work.y_mv.shape
-    names = ("row", "at", "height_mv", "steep_mv", "kinship")
-    row, at, height, steep, kinship = (np.concatenate([getattr(t, name) for t in trains]) for name in names)
+    names = ("row", "at", "height_mv", "steep_mv", "kinship", "company")
+    row, at, height, steep, kinship, company = (
+        np.concatenate([getattr(t, name) for t in trains]) for name in names
+    )
     alike = kinship >= ALIKE
 
     real = height >= np.where(alike, LEAST_MV, SURE_MV)
+    shape = (n_leads, n // work.step + 1)
     for size in (height, steep):  # a P wave may be high, but never steep
-        usual = _usual(row, at // work.step, np.where(alike, size, 0.0), (n_leads, n // work.step + 1))
+        usual = _usual(row, at // work.step, np.where(company >= ALIKE, size, 0.0), shape)
+        alone = _usual(row, at // work.step, np.where(alike, size, 0.0), shape)
+        usual = np.where(usual > 0, usual, alone)
         real &= size >= SMALL_SHARE * usual
     quiet = np.zeros((n_leads, n), bool)
     there = _presence(work)
+    least = STANDSTILL_S * work.fs_hz - 1
     for lead in range(n_leads):
-        edges = np.concatenate([[0], np.sort(at[real & (row == lead)]), [n]])
-        for k in np.flatnonzero(np.diff(edges) >= STANDSTILL_S * work.fs_hz - 1):
-            start, end = edges[k], edges[k + 1]
-            if there[lead, end] - there[lead, start] >= (STANDSTILL_S - 0.05) * work.fs_hz:
-                quiet[lead, start:end] = True
+        sure = np.unique(at[real & (row == lead)])
+        edges = np.concatenate([[0], sure, [n]])
+        for k in np.flatnonzero(np.diff(edges) >= least):
+            inner = beats_beneath(work, lead, edges[k], edges[k + 1], sure)
+            if not len(inner):
+                again = np.unique(at[(company >= ALIKE) & (row == lead)])
+                inner = beats_as_before(work, lead, edges[k], edges[k + 1], again)
+            inner_edges = np.concatenate([[edges[k]], inner, [edges[k + 1]]])
+            for start, end in zip(inner_edges[:-1], inner_edges[1:], strict=True):
+                present = there[lead, end] - there[lead, start]
+                if end - start >= least and present >= (STANDSTILL_S - 0.05) * work.fs_hz:
+                    quiet[lead, start:end] = True
     return quiet
 
 
@@ -265,10 +306,21 @@ def _standstill_findings(states: _States, work: Work, leads: Sequence[str]) -> l
     return join_findings(found)
 
 
-def _runs(flags: Bools, work: Work, leads: Sequence[str], pattern: str, need: int) -> list[PatientFirst]:
-    """Runs of at least ``need`` windows in which any lead is flagged, as findings."""
+def _held(raised: Bools, cleared: Bools, most: int) -> Bools:
+    """(n_windows,): raised, with the pauses of up to ``most`` windows in which nothing clears the alarm."""
+    out = raised.copy()
+    for start, end in _true_runs(~raised):
+        between = start > 0 and end < len(raised) and end - start <= most
+        out[start:end] = between and not cleared[start:end].any()
+    return out
+
+
+def _runs(
+    flags: Bools, work: Work, leads: Sequence[str], pattern: str, need: int, *, within: Bools | None = None
+) -> list[PatientFirst]:
+    """Runs of at least ``need`` windows in which any lead is flagged, or of ``within``, as findings."""
     found = []
-    for start, end in _true_runs(np.any(flags, axis=0)):
+    for start, end in _true_runs(np.any(flags, axis=0) if within is None else within):
         if end - start >= need:
             shown = np.flatnonzero(flags[:, start:end].any(axis=1))
             last = ((end - 1) * work.step + work.length) / work.fs_hz

@@ -41,6 +41,7 @@ class Train:
     width_ms: Floats
     likeness: Floats  # -1 to 1: the better correlation with the candidate before and the one after
     kinship: Floats  # the same with the two before and the two after: T waves or extra beats may lie between
+    company: Floats  # the second best of those four: noise resembles itself once, beats do so again and again
 
     def __len__(self) -> int:
         return len(self.row)
@@ -139,13 +140,14 @@ def measure_train(work: Work, steepness: Floats, row: Ints, at: Ints) -> Train:
     n = work.y_mv.shape[1]
     half = round(HALF_S * work.fs_hz)
     if row.size == 0:
-        return Train(row, at, *(np.empty(0) for _ in range(5)))
+        return Train(row, at, *(np.empty(0) for _ in range(6)))
     index = np.clip(at[:, None] + np.arange(-half, half + 1), 0, n - 1)
     piece = work.y_mv[row[:, None], index]
     steep = steepness[row, at]
-    near, next_but_one = _likeness(piece, steep, row, 1), _likeness(piece, steep, row, 2)
+    near = _likeness(piece, steep, row, 1)
+    four = np.sort(np.concatenate([near, _likeness(piece, steep, row, 2)]), axis=0)
     widths = _widths_ms(piece, work.fs_hz)
-    return Train(row, at, np.ptp(piece, axis=1), steep, widths, near, np.maximum(near, next_but_one))
+    return Train(row, at, np.ptp(piece, axis=1), steep, widths, near.max(axis=0), four[-1], four[-2])
 
 
 def _widths_ms(piece: Floats, rate: float) -> Floats:
@@ -165,10 +167,10 @@ def _widths_ms(piece: Floats, rate: float) -> Floats:
 
 
 def _likeness(piece: Floats, steep: Floats, row: Ints, apart: int) -> Floats:
-    """Better of the correlations with the complexes ``apart`` before and after in the same lead."""
+    """(2, n): correlations with the complexes ``apart`` before and after in the same lead, -1 where there is none."""
     count = len(piece)
     if count <= apart:
-        return np.full(count, -1.0)
+        return np.full((2, count), -1.0)
     n = piece.shape[1] - 2 * TRIM
     core = piece[:, TRIM:-TRIM] - piece[:, TRIM:-TRIM].mean(axis=1, keepdims=True)
     first, second = core[:-apart], piece[apart:]
@@ -186,4 +188,4 @@ def _likeness(piece: Floats, steep: Floats, row: Ints, apart: int) -> Floats:
     best = np.where(lower >= SAME_HEIGHT * higher, best, np.minimum(best, 0.0))
     best[row[apart:] != row[:-apart]] = -1.0
     none = np.full(apart, -1.0)
-    return np.maximum(np.concatenate([none, best]), np.concatenate([best, none]))
+    return np.stack([np.concatenate([none, best]), np.concatenate([best, none])])

@@ -62,10 +62,11 @@ def grid_samples(fs_hz: float) -> int:
     return factor * round(fs_hz / factor)
 
 
-def prepare(x_mv: Floats, fs_hz: float) -> Work:
+def prepare(x_mv: Floats, fs_hz: float, *, lost: Bools | None = None) -> Work:
     """(n_leads, n_samples) mV, NaN where missing → the leads at the working rate, about 1 to 28 Hz.
 
-    A gap is filled with its nearest sample, so that what lies beyond a long gap has no influence.
+    A gap is filled with its nearest sample, so that what lies beyond a long gap has no influence. ``lost``: samples
+    that are there and tell nothing of the heart; they are filtered with the others, but not present.
     """
     factor = decimation(fs_hz)
     rate = fs_hz / factor
@@ -77,6 +78,8 @@ def prepare(x_mv: Floats, fs_hz: float) -> Work:
     slow = smooth
     for box_s in SLOW_BOXES_S:
         slow = uniform_filter1d(slow, 2 * round(box_s * rate / 2) + 1, axis=1, mode="nearest")
+    if lost is not None and lost.any():
+        present = present & ~lost
     return Work(
         smooth - slow, _any_in_step(present, factor, slow.shape[1]), rate, round(rate), 4 * round(rate)
     )

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
+from functools import reduce
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +18,7 @@ from sigguard.collecting import Collector
 from sigguard.electrode_powers import join_powers
 from sigguard.electrodes import whose_noise, worth_stating
 from sigguard.errors import UsageError
-from sigguard.findings import PatientFirst, Placement, Value
+from sigguard.findings import PatientFirst, Placement, Value, under_alarm
 from sigguard.grading import best_strip, combine_values, grade_rows, judge, lead_summaries, spans
 from sigguard.lead_laws import law_findings, scale_notes, usual_breaks
 from sigguard.noise import MAINS_HZ
@@ -28,6 +29,7 @@ from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
 from sigguard.reliability import LEARNED_FAULTS
 from sigguard.report.document import Report
+from sigguard.rhythm_gaps import Contact, contact
 from sigguard.rhythm_shape import grid_samples
 from sigguard.segment_pass import Part, Progress, Source, measure_all, shipped_model
 from sigguard.segments import ABSENT, FAULTS, GRADES, MEASUREMENTS, UNITS, Segments
@@ -164,7 +166,7 @@ def screen(
     ):
         collected.add(part)
     beats = collected.lead_beats()
-    alarms = _patient_first(source, beats, collected.has_data, workers)
+    alarms = _patient_first(source, beats, collected, workers)
     segments = _silenced(collected.segments(), alarms)
     handed = _global_measurements(collected.strips, info, plan)
     values, st_by_lead = combine_values(segments, handed, fridericia=options.fridericia)
@@ -216,36 +218,44 @@ def _silenced(segments: Segments, alarms: Sequence[PatientFirst]) -> Segments:
     reliable = silence_under(segments.reliable, segments.start_s, segments.end_s, stretches)
     # A rhythm that may kill is not to be read as noise: what the classifiers call by name is not named here.
     fault = segments.fault.copy()
-    under = np.any(
-        [(segments.start_s < last) & (segments.end_s > first) for first, last, _ in stretches], axis=0
-    )
-    fault[np.ix_(under, [FAULTS.index(name) for name in LEARNED_FAULTS])] = 0.0
+    under = under_alarm(alarms, segments.start_s, segments.end_s)
+    for name in LEARNED_FAULTS:
+        fault[under, FAULTS.index(name)] = 0.0
     return replace(segments, reliable=reliable, fault=fault, grade=grade_rows(reliable, segments.absent))
 
 
 def _patient_first(
-    source: Source, beats: Sequence[NDArray], has_data: NDArray[np.bool_], workers: Workers | None
+    source: Source, beats: Sequence[NDArray], collected: Collector, workers: Workers | None
 ) -> list[PatientFirst]:
     """Look for lethal rhythms block by block, with the margin that makes blocks see what the whole sees."""
     info = source.info
     grid = grid_samples(info.fs_hz)
     size = max(1, int(ALARM_BLOCK_S * info.fs_hz) // grid) * grid
     margin = int(np.ceil(MARGIN_S * info.fs_hz / grid)) * grid
-    whole = info.n_samples <= size
+    edges = [(start, min(start + size, info.n_samples)) for start in range(0, info.n_samples, size)]
+    if workers is not None and len(edges) < LEAST_ALARM_BLOCKS:
+        workers = None
+    has_data: list[bool] | None = None
+    rest_tells: NDArray[np.bool_] | None = None
+    if len(edges) > 1:
+        has_data, rest_tells = collected.has_data.tolist(), np.zeros(info.n_leads, dtype=bool)
+        if collected.rests:  # how noisy the leads are matters only where one of them does not move
+            noise = workers.run(_contact, edges) if workers else (_contact(source, *edge) for edge in edges)
+            rest_tells = reduce(Contact.also, noise).rest_tells
 
     def tasks() -> Iterator[tuple]:
-        for start in range(0, info.n_samples, size):
-            stop = min(start + size, info.n_samples)
+        for start, stop in edges:
             first, last = max(0, start - margin), min(info.n_samples, stop + margin)
             near = [at[np.searchsorted(at, first) : np.searchsorted(at, last)] for at in beats]
-            yield start, stop, first, last, near, None if whole else has_data.tolist()
+            yield start, stop, first, last, near, has_data, rest_tells
 
     found: Iterator[list[PatientFirst]]
-    if workers is None or info.n_samples < LEAST_ALARM_BLOCKS * size:
-        found = (_alarms(source, *task) for task in tasks())
-    else:
-        found = workers.run(_alarms, tasks())
+    found = workers.run(_alarms, tasks()) if workers else (_alarms(source, *task) for task in tasks())
     return join_findings([alarm for part in found for alarm in part])
+
+
+def _contact(source: Source, start: int, stop: int) -> Contact:
+    return contact(source.read(start, stop), source.info.fs_hz)
 
 
 def _alarms(
@@ -256,6 +266,7 @@ def _alarms(
     last: int,
     beats: Sequence[NDArray],
     has_data: list[bool] | None,
+    rest_tells: NDArray[np.bool_] | None,
 ) -> list[PatientFirst]:
     """What is found between two samples, seen with a margin; ``beats`` within it by lead."""
     info = source.info
@@ -265,6 +276,7 @@ def _alarms(
         info.leads,
         lead_beats_s=[(at - first) / info.fs_hz for at in beats],
         lead_has_data=has_data,
+        rest_tells=rest_tells,
     )
     return cut_findings(
         found, offset_s=first / info.fs_hz, start_s=start / info.fs_hz, end_s=stop / info.fs_hz

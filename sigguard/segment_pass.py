@@ -20,6 +20,7 @@ from sigguard.measure import Analysis, analyse
 from sigguard.profile import Profile
 from sigguard.recording import RecordingInfo
 from sigguard.reliability import ReliabilityModel
+from sigguard.rhythm_gaps import at_rest
 from sigguard.segments import Segments
 from sigguard.verdicts import (
     NO_WAVE,
@@ -61,6 +62,7 @@ class Part:
     electrode_powers: ElectrodePowers | None
     law_breaks: tuple[LawBreak, ...]
     has_data: NDArray[np.bool_]  # (n_leads,): at least one sample here
+    rests: bool  # a lead does not move for a while; seams lie within the margin, so none is missed
     global_beat_mv: NDArray[np.float32] | None  # (n_segments, n_leads, LENGTH), about the common beat
     global_marks_ms: NDArray[np.float64] | None  # (n_segments, 5)
 
@@ -177,6 +179,7 @@ def _measure_batch(
         powers,
         law_breaks(core.transpose(1, 0, 2).reshape(n_leads, -1), fs_hz, info.leads),
         np.asarray(np.isfinite(block_mv).any(axis=1)),
+        bool(at_rest(block_mv, fs_hz).any()),
         common.get("beat_mv"),
         common.get("marks_ms"),
     )

@@ -12,7 +12,10 @@ def one_line(report: Report) -> str:
 
     Without line ends and control characters, whatever the header holds.
     """
-    parts = [VERDICT_WORDS[report.verdict].lower(), f"can be trusted: {measurable_words(report)}"]
+    verdict = VERDICT_WORDS[report.verdict].lower()
+    if report.patient_first:
+        verdict = f"after that {verdict}"
+    parts = [verdict, f"can be trusted: {measurable_words(report)}"]
     if report.advice_to_tell:
         act = report.advice_to_tell[0].text.rstrip(".")
         parts.append(f"next time: {act}" if report.for_next_time else act)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable
 
-from sigguard.findings import PatientFirst
+from sigguard.findings import PatientFirst, under_alarm
 
 GRADE_WORDS = {
     "all": "everything",
@@ -78,7 +78,7 @@ def cell(text: object) -> str:
 
 def alarm_between(alarms: Iterable[PatientFirst], start_s: float, end_s: float) -> bool:
     """Whether a patient-first stretch lies on any part of the time from start to end."""
-    return any(a.start_s < end_s and a.end_s > start_s for a in alarms)
+    return bool(under_alarm(alarms, start_s, end_s))
 
 
 def listing(words: Iterable[str], *, last: str = "and") -> str:

@@ -271,7 +271,12 @@ def test_one_line():
     assert line.startswith(
         "morning: accept in part; can be trusted: rate, PR, QRS and ST in 3 of 12 leads; Reapply"
     )
-    assert one_line(alarm_report()).startswith("PATIENT FIRST: looks like fibrillation")
+    alarmed = one_line(alarm_report(judgement=Judgement("accept", ())))
+    assert alarmed.startswith("PATIENT FIRST: looks like fibrillation")
+    assert "after that accept" in alarmed and "after that" not in line
+    page = page_of(alarm_report(judgement=Judgement("accept", ())))
+    assert "<title>Patient first: " in page and "Patient first, after that: Accept" in page
+    assert "Patient first" not in page_of(make_report())
     hostile = one_line(make_report(name="x\n\x1b[2Jy\u202e"))
     assert "\n" not in hostile and "\x1b" not in hostile and "\u202e" not in hostile
 
