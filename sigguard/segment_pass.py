@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.blocks import Batch, SegmentPlan, batches, rows_of
+from sigguard.faults import judge_faults
 from sigguard.features import FEATURE_NAMES
 from sigguard.global_values import analyse_global
 from sigguard.grading import grade_rows
@@ -17,11 +18,10 @@ from sigguard.measure import Analysis, analyse
 from sigguard.profile import Profile
 from sigguard.recording import RecordingInfo
 from sigguard.reliability import ReliabilityModel
-from sigguard.segments import Segments
+from sigguard.segments import FaultDetails, Segments
 from sigguard.verdicts import (
     NO_WAVE,
     agreeing_leads,
-    fault_rows,
     hardly_there,
     judge_rows,
     limit_by_recording,
@@ -101,7 +101,8 @@ def _measure_batch(
     lead_beats = [at[analysis.beat_row % n_leads == k] for k in range(n_leads)]
     strips = n_leads > 1 and info.duration_s <= GLOBAL_MOST_S
     common = _global_part(rows, batch, analysis, model, profile, plan, fs_hz, n_leads) if strips else {}
-    segments = _table(info, plan, batch, lead_index, analysis, model, profile, common.get("agree"))
+    core = rows[:, batch.margin[0] : rows.shape[1] - batch.margin[1]]
+    segments = _table(info, plan, batch, lead_index, core, analysis, model, profile, common.get("agree"))
     residual = analysis.residual_mv.reshape(batch.count, n_leads, -1) if strips else None
     return Part(
         segments,
@@ -121,6 +122,7 @@ def _table(
     plan: SegmentPlan,
     batch: Batch,
     lead_index: NDArray[np.intp],
+    core_mv: NDArray[np.float64],
     analysis: Analysis,
     model: ReliabilityModel,
     profile: Profile,
@@ -136,6 +138,16 @@ def _table(
     absent = np.where(hidden & (absent == NO_WAVE), named, absent).astype(np.int8)
     value = np.where(absent > 0, np.nan, analysis.value)
     bound = np.where(absent > 0, np.nan, bound)
+    fault, details = judge_faults(
+        model,
+        analysis,
+        core_mv,
+        info.fs_hz,
+        fault_p=fault_p,
+        lost=~reliable & (absent == 0),
+        limited=limited,
+        n_leads=info.n_leads,
+    )
     which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
     return Segments(
         leads=info.leads,
@@ -149,8 +161,9 @@ def _table(
         reliable=reliable,
         absent=absent,
         grade=grade_rows(reliable, absent),
-        fault=fault_rows(model, analysis.features, fault_p, limited, batch.size / info.fs_hz),
+        fault=fault,
         features=analysis.features,
+        details=details,
     )
 
 
@@ -194,10 +207,14 @@ def _global_part(
 def joined_tables(parts: Sequence[Segments]) -> Segments:
     if len(parts) == 1:
         return parts[0]
-    columns = [name for name in Segments.__dataclass_fields__ if name not in ("leads", "feature_names")]
+    columns = [
+        name for name in Segments.__dataclass_fields__ if name not in ("leads", "feature_names", "details")
+    ]
     joined: dict[str, Any] = {
         name: np.concatenate([getattr(part, name) for part in parts]) for name in columns
     }
+    details = [part.details for part in parts if part.details is not None]
+    joined["details"] = FaultDetails.join(details) if len(details) == len(parts) else None
     return replace(parts[0], **joined)
 
 

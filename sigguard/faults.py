@@ -1,0 +1,190 @@
+"""Which faults lie on a row, what each takes, how strong it is and when: from calls to the table's columns."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from sigguard import fault_windows as windows
+from sigguard.features import FEATURE_NAMES, qrs_mask
+from sigguard.measure import Analysis
+from sigguard.reliability import HARM_FAULTS, LEARNED_FAULTS, ReliabilityModel
+from sigguard.segments import FAULTS, MEASUREMENTS, FaultDetails
+from sigguard.verdicts import fault_rows
+
+LEAST_P = 0.10  # where something is lost and nothing called, the likeliest disturbance is, from here on
+SURE = 0.5  # P(the fault alone takes the measurement) from which a lost one is laid to it
+STILL_UV, STILL_S, BLOCK_S = 20.0, 1.5, 0.25  # a lead without contact shows its amplifier's noise, a few µV
+WITHOUT_LOSS = 0.01  # what a fault that costs nothing weighs beside one that does
+WEAK_COSTS = 0.5
+
+
+def judge_faults(
+    model: ReliabilityModel,
+    analysis: Analysis,
+    x_mv: NDArray[np.float64],
+    fs_hz: float,
+    *,
+    fault_p: NDArray[np.float64],
+    lost: NDArray[np.bool_],
+    limited: NDArray[np.bool_],
+    n_leads: int,
+) -> tuple[NDArray[np.float32], FaultDetails]:
+    """((R, 9) fractions of the segment each fault lies on, their details); 0 where not called.
+
+    ``x_mv`` (R, N) are the rows as analysed, without margins, by time and then lead; ``lost`` (R, 5) the
+    measurements neither reliable nor absent. The order of naming: the measurements lost, each
+    weighed by the chance that this fault alone takes it and that the fault is there.
+    """
+    length_s = x_mv.shape[1] / fs_hz
+    fraction = fault_rows(model, analysis.features, fault_p, limited, length_s)
+    flat = still_beside_others(x_mv, fs_hz, n_leads)
+    if flat is not None:
+        seconds = (flat | analysis.flat).sum(axis=1) / fs_hz
+        still = flat.any(axis=1)
+        k = FAULTS.index("flat")
+        fraction[still, k] = np.maximum(fraction[still, k], seconds[still] / length_s)
+    _name_the_likeliest(fraction, fault_p, lost)
+    called = fraction > 0
+    harm_p = _harm(model, analysis.features, called)
+    there = np.ones(called.shape)
+    there[:, [FAULTS.index(f) for f in LEARNED_FAULTS]] = fault_p
+    gone = lost[:, None, :].astype(np.float64)
+    cost = (harm_p * (gone + WITHOUT_LOSS)).sum(axis=2)
+    weight = np.where(called, there * cost, 0.0)
+    harms = lost[:, None, :] & called[:, :, None] & (harm_p >= SURE)
+    _leave_no_loss_unexplained(harms, harm_p * there[:, :, None], lost, called)
+    found = _windows(analysis, x_mv, fs_hz, called, flat)
+    fraction = _by_windows(fraction, found.on)
+    return fraction, FaultDetails(
+        weight=weight.astype(np.float32),
+        harms=harms,
+        strength=_strength(analysis.features, found.level, called),
+        windows=_bits(found.on, called),
+        n_windows=np.full(len(fraction), found.on.shape[1], dtype=np.uint8),
+    )
+
+
+def still_beside_others(x_mv: NDArray[np.float64], fs_hz: float, n_leads: int) -> NDArray[np.bool_] | None:
+    """(R, N): a lead keeps within 20 µV for 1.5 s while most other leads move; None where no lead does.
+
+    That the others move tells a lead without contact from a heart that pauses: a lead alone is
+    never so called. Rows by time and then lead.
+    """
+    width = max(1, int(round(BLOCK_S * fs_hz)))
+    count, reach = x_mv.shape[1] // width, int(round(STILL_S / BLOCK_S))
+    if n_leads < 2 or count < reach:
+        return None
+    blocks = x_mv[:, : count * width].reshape(len(x_mv), count, width)
+    high, low = blocks.max(axis=2), blocks.min(axis=2)
+    view = np.lib.stride_tricks.sliding_window_view
+    calm = view(high, reach, axis=1).max(axis=2) - view(low, reach, axis=1).min(axis=2) <= STILL_UV * 1e-3
+    if not calm.any():
+        return None
+    by_lead = calm.reshape(-1, n_leads, calm.shape[1])
+    moving = n_leads - by_lead.sum(axis=1, keepdims=True)
+    alone = (by_lead & (moving > 0.5 * (n_leads - 1))).reshape(calm.shape)
+    if not alone.any():
+        return None
+    still = np.zeros((len(x_mv), count), dtype=bool)
+    for step in range(reach):
+        still[:, step : step + alone.shape[1]] |= alone
+    out = np.zeros(x_mv.shape, dtype=bool)
+    out[:, : count * width] = np.repeat(still, width, axis=1)
+    out[:, count * width :] = still[:, -1:]
+    return out
+
+
+def _name_the_likeliest(
+    fraction: NDArray[np.float32], fault_p: NDArray[np.float64], lost: NDArray[np.bool_]
+) -> None:
+    """Where something is lost and no disturbance is called, call the likeliest if it is likely at all."""
+    bare = lost.any(axis=1) & ~fraction.any(axis=1)
+    best = fault_p.argmax(axis=1)
+    rows = np.flatnonzero(bare & (fault_p.max(axis=1) >= LEAST_P))
+    learned = np.array([FAULTS.index(f) for f in LEARNED_FAULTS])
+    fraction[rows, learned[best[rows]]] = 1.0
+
+
+def _harm(
+    model: ReliabilityModel, features: NDArray[np.float32], called: NDArray[np.bool_]
+) -> NDArray[np.float64]:
+    """(R, 9, 5): P(this fault alone takes the measurement), where it is called."""
+    out = np.zeros((*called.shape, len(MEASUREMENTS)))
+    columns = [FAULTS.index(f) for f in HARM_FAULTS]
+    row, kind = np.nonzero(called[:, columns])
+    if len(row):
+        out[row, np.array(columns)[kind]] = model.harm(features[row], kind)
+    out[:, FAULTS.index("weak")] = WEAK_COSTS * called[:, [FAULTS.index("weak")]]
+    out[:, FAULTS.index("narrow-band")] = called[:, [FAULTS.index("narrow-band")]]
+    return out
+
+
+def _leave_no_loss_unexplained(
+    harms: NDArray[np.bool_],
+    share: NDArray[np.float64],
+    lost: NDArray[np.bool_],
+    called: NDArray[np.bool_],
+) -> None:
+    """A lost measurement that no fault surely takes is laid to the one most likely to."""
+    open_ = lost & ~harms.any(axis=1) & called.any(axis=1)[:, None]
+    row, m = np.nonzero(open_)
+    if len(row):
+        harms[row, share[row, :, m].argmax(axis=1), m] = True
+        harms &= called[:, :, None]
+
+
+def _windows(
+    analysis: Analysis,
+    x_mv: NDArray[np.float64],
+    fs_hz: float,
+    called: NDArray[np.bool_],
+    flat: NDArray[np.bool_] | None,
+) -> windows.FaultWindows:
+    """Seconds of each fault, all FAULTS; those that are no matter of time lie on all of them."""
+    count = windows.n_windows(x_mv.shape[1] / fs_hz)
+    on = np.repeat(called[:, None, :], count, axis=1)
+    level = np.full(called.shape, np.nan, dtype=np.float32)
+    timed = [FAULTS.index(kind) for kind in windows.KINDS]
+    rows = np.flatnonzero(called[:, timed].any(axis=1))
+    if len(rows):
+        mask = qrs_mask(analysis.beat_row, analysis.beat_s, x_mv.shape, fs_hz)[rows]
+        still = analysis.flat[rows] if flat is None else analysis.flat[rows] | flat[rows]
+        found = windows.fault_windows(
+            x_mv[rows],
+            fs_hz,
+            called=called[np.ix_(rows, timed)],
+            qrs_mask=mask,
+            residual_mv=analysis.residual_mv[rows],
+            fs_res_hz=analysis.residual_mv.shape[1] * fs_hz / x_mv.shape[1],
+            masks={"flat": still, "clipped": analysis.clipped[rows], "missing": analysis.missing[rows]},
+            mains_hz=analysis.features[rows, FEATURE_NAMES.index("mains_hz")],
+            tremor_uv=analysis.features[rows, FEATURE_NAMES.index("tremor_uv")],
+        )
+        on[np.ix_(rows, np.arange(count), timed)] = found.on
+        level[np.ix_(rows, timed)] = found.level
+    return windows.FaultWindows(on, level)
+
+
+def _by_windows(fraction: NDArray[np.float32], on: NDArray[np.bool_]) -> NDArray[np.float32]:
+    """Fractions of the learned faults from their windows; the others are measured to the sample."""
+    out = fraction.copy()
+    for name in LEARNED_FAULTS:
+        k = FAULTS.index(name)
+        out[:, k] = np.where(fraction[:, k] > 0, on[:, :, k].mean(axis=1), 0.0)
+    return out
+
+
+def _strength(
+    features: NDArray[np.float32], level: NDArray[np.float32], called: NDArray[np.bool_]
+) -> NDArray[np.float32]:
+    out = level.copy()
+    for kind, name in (("wander", "wander_range_uv"), ("weak", "qrs_pp_uv")):
+        out[:, FAULTS.index(kind)] = features[:, FEATURE_NAMES.index(name)]
+    return np.where(called & np.isfinite(out) & (out > 0), out, np.nan).astype(np.float32)
+
+
+def _bits(on: NDArray[np.bool_], called: NDArray[np.bool_]) -> NDArray[np.uint64]:
+    """(R, W, 9) → (R, 9), bit k for window k."""
+    power = np.uint64(1) << np.arange(on.shape[1], dtype=np.uint64)
+    return np.where(called, (on * power[None, :, None]).sum(axis=1, dtype=np.uint64), np.uint64(0))
