@@ -7,16 +7,19 @@ from numpy.typing import NDArray
 
 from sigguard import fault_windows as windows
 from sigguard.features import FEATURE_NAMES, qrs_mask
+from sigguard.flatline import SAME_MV, Runs, paint, runs_of
 from sigguard.measure import Analysis
 from sigguard.reliability import HARM_FAULTS, LEARNED_FAULTS, ReliabilityModel
 from sigguard.segments import FAULTS, MEASUREMENTS, FaultDetails
 from sigguard.verdicts import fault_rows
 
+SUSPECT = 0.45  # share of its threshold from which a disturbance is called where something is lost
 LEAST_P = 0.10  # where something is lost and nothing called, the likeliest disturbance is, from here on
 SURE = 0.5  # P(the fault alone takes the measurement) from which a lost one is laid to it
+HELD_S = 0.12
 STILL_UV, STILL_S, BLOCK_S = 20.0, 1.5, 0.25  # a lead without contact shows its amplifier's noise, a few µV
 WITHOUT_LOSS = 0.01  # what a fault that costs nothing weighs beside one that does
-WEAK_COSTS = 0.5
+WEAK_COSTS = 0.25  # what disturbs a small QRS comes first, if it is surely there
 
 
 def judge_faults(
@@ -38,13 +41,15 @@ def judge_faults(
     """
     length_s = x_mv.shape[1] / fs_hz
     fraction = fault_rows(model, analysis.features, fault_p, limited, length_s)
-    flat = still_beside_others(x_mv, fs_hz, n_leads)
+    flat = _either(still_beside_others(x_mv, fs_hz, n_leads), held(x_mv, fs_hz))
+    if flat is not None:
+        flat &= ~analysis.clipped
     if flat is not None:
         seconds = (flat | analysis.flat).sum(axis=1) / fs_hz
         still = flat.any(axis=1)
         k = FAULTS.index("flat")
         fraction[still, k] = np.maximum(fraction[still, k], seconds[still] / length_s)
-    _name_the_likeliest(fraction, fault_p, lost)
+    _name_the_likely(fraction, fault_p, lost, model.fault_threshold)
     called = fraction > 0
     harm_p = _harm(model, analysis.features, called)
     there = np.ones(called.shape)
@@ -95,14 +100,48 @@ def still_beside_others(x_mv: NDArray[np.float64], fs_hz: float, n_leads: int) -
     return out
 
 
-def _name_the_likeliest(
-    fraction: NDArray[np.float32], fault_p: NDArray[np.float64], lost: NDArray[np.bool_]
+def held(x_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.bool_] | None:
+    """(R, N): a value repeated for 0.12 s or more in a row that otherwise does not rest; None without any.
+
+    A row whose noise moves every few samples cannot stand still that long by chance; one that often
+    rests for a shorter while (coarse steps, no noise) can.
+    """
+    same = np.abs(np.diff(x_mv, axis=1)) <= SAME_MV
+    least = max(4, int(HELD_S * fs_hz))
+    rows = np.flatnonzero(same.sum(axis=1) >= least)
+    if not len(rows):
+        return None
+    runs = runs_of(same[rows], max(2, least // 4))
+    long = runs.length >= least
+    n_long = np.bincount(runs.row[long], minlength=len(rows))
+    n_short = np.bincount(runs.row[~long], minlength=len(rows))
+    odd = (n_long > 0) & (n_short <= n_long) & (same[rows].mean(axis=1) < 1.0)
+    found = runs.where(long & odd[runs.row])
+    if not len(found):
+        return None
+    out = np.zeros(x_mv.shape, dtype=bool)
+    out[rows] = paint(Runs(found.row, found.start, found.end + 1), (len(rows), x_mv.shape[1]))
+    return out
+
+
+def _either(a: NDArray[np.bool_] | None, b: NDArray[np.bool_] | None) -> NDArray[np.bool_] | None:
+    return b if a is None else a if b is None else a | b
+
+
+def _name_the_likely(
+    fraction: NDArray[np.float32],
+    fault_p: NDArray[np.float64],
+    lost: NDArray[np.bool_],
+    threshold: NDArray[np.float64],
 ) -> None:
-    """Where something is lost and no disturbance is called, call the likeliest if it is likely at all."""
-    bare = lost.any(axis=1) & ~fraction.any(axis=1)
+    """Where something is lost a disturbance is called on less evidence, and the likeliest if none else is."""
+    some = lost.any(axis=1)
+    learned = np.array([FAULTS.index(f) for f in LEARNED_FAULTS])
+    row, k = np.nonzero(some[:, None] & (fault_p >= SUSPECT * threshold))
+    fraction[row, learned[k]] = 1.0
+    bare = some & ~fraction.any(axis=1)
     best = fault_p.argmax(axis=1)
     rows = np.flatnonzero(bare & (fault_p.max(axis=1) >= LEAST_P))
-    learned = np.array([FAULTS.index(f) for f in LEARNED_FAULTS])
     fraction[rows, learned[best[rows]]] = 1.0
 
 

@@ -27,6 +27,8 @@ from sigguard.training.table import GROUPS, Chunk, Procedure, Rows
 CELL_KINDS = ("recorded-bw", "recorded-ma", "recorded-em", "muscle", "motion", "mains")
 CELL_DRAWS = 10
 FELT = 0.5  # share of the tolerance
+TOLD = 0.5  # share of the rows whose header tells the converter's step and rails
+USUAL_RAIL_MV = 5.0
 
 
 def run_chunk(
@@ -60,7 +62,8 @@ def _run_rows(
     fs_hz = carriers[0].fs_hz
     clean_mv = np.stack([carriers[k].signal_mv[lead] for k, lead in picked])
     step_mv = np.array([carriers[k].step_mv for k, _ in picked])
-    clean = procedure.analyse(_stepped(clean_mv, step_mv), fs_hz)
+    told_mv = np.where(rng.random(len(picked)) < TOLD, step_mv, np.nan)  # a header may say the step, or not
+    clean = procedure.analyse(_stepped(clean_mv, step_mv), fs_hz, step_mv=told_mv)
     qrs_mv = np.array([carriers[k].qrs_mv[lead] for k, lead in picked])
     qrs_mv = _with_measured_qrs(qrs_mv, clean, clean_mv, fs_hz)
     spoilt: list[SpoiltRow] = []
@@ -82,7 +85,7 @@ def _run_rows(
             )
             of.append(row)
             cell.append(number)
-    return _judge_rows(chunk, clean, spoilt, np.array(of), np.array(cell), picked, fs_hz, procedure)
+    return _judge_rows(chunk, clean, spoilt, np.array(of), np.array(cell), picked, told_mv, fs_hz, procedure)
 
 
 def _judge_rows(
@@ -92,13 +95,17 @@ def _judge_rows(
     of: NDArray[np.intp],
     cell: NDArray[np.intp],
     picked: list[tuple[int, int]],
+    told_mv: NDArray[np.float64],
     fs_hz: float,
     procedure: Procedure,
 ) -> Rows:
     duration_s = spoilt[0].x_mv.shape[0] / fs_hz
-    found = procedure.analyse(np.stack([row.x_mv for row in spoilt]), fs_hz)
+    step_mv, rails_mv = _header(spoilt, told_mv[of])
+    found = procedure.analyse(
+        np.stack([row.x_mv for row in spoilt]), fs_hz, step_mv=step_mv, rails_mv=rails_mv
+    )
     labels = label_rows(clean, found, duration_s, of=of)
-    felt, taken = _alone(clean, spoilt, of, labels, fs_hz, procedure)
+    felt, taken = _alone(clean, spoilt, of, labels, told_mv, fs_hz, procedure)
     fault, asked = fault_truth([row.kinds for row in spoilt], felt)
     n = len(spoilt)
     return Rows(
@@ -125,6 +132,7 @@ def _alone(
     spoilt: list[SpoiltRow],
     of: NDArray[np.intp],
     labels: Labels,
+    told_mv: NDArray[np.float64],
     fs_hz: float,
     procedure: Procedure,
 ) -> tuple[list[dict[str, bool]], list[dict[str, NDArray[np.int8]]]]:
@@ -144,13 +152,27 @@ def _alone(
             taken[r]["missing" if lost else TRANSFORM_FAULT[kind]] = taken_here[r]
     each = [(r, kind, x) for r, row in enumerate(spoilt) for kind, x in row.alone]
     if each:
-        run = procedure.analyse(np.stack([x for _, _, x in each]), fs_hz)
-        judged = label_rows(clean, run, spoilt[0].x_mv.shape[0] / fs_hz, of=of[[r for r, _, _ in each]])
+        base = of[[r for r, _, _ in each]]
+        run = procedure.analyse(np.stack([x for _, _, x in each]), fs_hz, step_mv=told_mv[base])
+        judged = label_rows(clean, run, spoilt[0].x_mv.shape[0] / fs_hz, of=base)
         for (r, kind, _), hit, answers in zip(each, _felt(judged), _taken(judged), strict=True):
             felt[r][kind] = bool(hit)
             before = taken[r].get(FAULT_OF[kind], answers)
             taken[r][FAULT_OF[kind]] = np.maximum(before, answers)
     return felt, taken
+
+
+def _header(
+    spoilt: list[SpoiltRow], told_mv: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Steps (n,) and rails (n, 2) as a header tells them, NaN where it does not."""
+    coarse = np.array(["quantisation" in row.kinds for row in spoilt])
+    rails_mv = np.array([row.rails_mv for row in spoilt])
+    reach_mv = np.array([np.nanmax(np.abs(row.x_mv), initial=0.0) for row in spoilt])
+    wide_mv = np.maximum(USUAL_RAIL_MV, reach_mv + 1.0)  # a converter whose rails nothing touches
+    rails_mv = np.where(np.isnan(rails_mv), wide_mv[:, None] * (-1.0, 1.0), rails_mv)
+    rails_mv[np.isnan(told_mv)] = np.nan
+    return np.where(coarse, np.nan, told_mv), rails_mv
 
 
 def _felt(labels: Labels) -> NDArray[np.bool_]:

@@ -97,6 +97,7 @@ class SpoiltRow:
     kinds: tuple[str, ...]
     snr_db: float  # of all additive noise together; NaN without
     alone: tuple[tuple[str, Array], ...]
+    rails_mv: tuple[float, float] = (np.nan, np.nan)  # where it was clipped
 
 
 def draw_kinds(rng: np.random.Generator, source: NoiseSource) -> tuple[str, ...]:
@@ -135,8 +136,14 @@ def spoil_row(
         x = source.noise(rng, kind, n_samples=len(clean_mv), fs_hz=fs_hz)
         noise.append(x * (share * snr_gain(size, x, snr_db - stronger.get(kind, 0.0), fs_hz)))
     x_mv = clean_mv + np.sum(noise, axis=0) if noise else clean_mv
+    rails_mv = (np.nan, np.nan)
     for kind in transforms:
         x_mv = _transform(rng, kind, x_mv, size, fs_hz)
+        if kind == "clipping":
+            low_mv, high_mv = apply_quantisation(
+                np.array([np.nanmin(x_mv), np.nanmax(x_mv)]), step_mv=step_mv
+            )
+            rails_mv = (float(low_mv), float(high_mv))
     alone: tuple[tuple[str, Array], ...] = ()
     if len(kinds) > 1:
         alone = tuple(
@@ -148,6 +155,7 @@ def spoil_row(
         kinds=kinds,
         snr_db=snr_db if additive else np.nan,
         alone=alone,
+        rails_mv=rails_mv,
     )
 
 
