@@ -9,6 +9,7 @@ from sigguard import fault_windows as windows
 from sigguard.features import FEATURE_NAMES, qrs_mask
 from sigguard.flatline import SAME_MV, Runs, paint, runs_of
 from sigguard.measure import Analysis
+from sigguard.noise import widen
 from sigguard.reliability import HARM_FAULTS, LEARNED_FAULTS, ReliabilityModel
 from sigguard.segments import FAULTS, MEASUREMENTS, FaultDetails
 from sigguard.verdicts import fault_rows
@@ -17,6 +18,7 @@ SUSPECT = 0.45  # share of its threshold from which a disturbance is called wher
 LEAST_P = 0.10  # where something is lost and nothing called, the likeliest disturbance is, from here on
 SURE = 0.5  # P(the fault alone takes the measurement) from which a lost one is laid to it
 HELD_S = 0.12
+OFTEN_SAME = 0.4  # share of neighbours alike, below which 0.12 s alike are no chance
 STILL_UV, STILL_S, BLOCK_S = 20.0, 1.5, 0.25  # a lead without contact shows its amplifier's noise, a few µV
 WITHOUT_LOSS = 0.01  # what a fault that costs nothing weighs beside one that does
 WEAK_COSTS = 0.25  # what disturbs a small QRS comes first, if it is surely there
@@ -87,8 +89,10 @@ def still_beside_others(x_mv: NDArray[np.float64], fs_hz: float, n_leads: int) -
     if not calm.any():
         return None
     by_lead = calm.reshape(-1, n_leads, calm.shape[1])
-    moving = n_leads - by_lead.sum(axis=1, keepdims=True)
-    alone = (by_lead & (moving > 0.5 * (n_leads - 1))).reshape(calm.shape)
+    resting = n_leads - by_lead.sum(axis=1) <= 0.5 * (n_leads - 1)
+    # Leads come to rest one after the other: near a time when most do, one more proves nothing.
+    by_lead = by_lead & ~widen(resting, reach)[:, None, :]
+    alone = by_lead.reshape(calm.shape)
     if not alone.any():
         return None
     still = np.zeros((len(x_mv), count), dtype=bool)
@@ -115,7 +119,10 @@ def held(x_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.bool_] | None:
     long = runs.length >= least
     n_long = np.bincount(runs.row[long], minlength=len(rows))
     n_short = np.bincount(runs.row[~long], minlength=len(rows))
-    odd = (n_long > 0) & (n_short <= n_long) & (same[rows].mean(axis=1) < 1.0)
+    inside = np.bincount(runs.row[long], runs.length[long], minlength=len(rows))
+    outside = same.shape[1] - inside
+    often = (same[rows].sum(axis=1) - inside) / np.maximum(outside, 1)
+    odd = (n_long > 0) & (n_short <= n_long) & (often < OFTEN_SAME) & (outside > 0.02 * same.shape[1])
     found = runs.where(long & odd[runs.row])
     if not len(found):
         return None
