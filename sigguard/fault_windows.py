@@ -82,7 +82,7 @@ def fault_windows(
         np.asarray(mains_hz, dtype=np.float64)[rows],
         np.asarray(tremor_uv, dtype=np.float64)[rows],
         count,
-        called[rows, :4].any(axis=0),
+        np.atleast_1d(called[rows, :4].any(axis=0)),
     )
     for k, (kind, by_window) in enumerate(levels.items()):
         hit = called[rows, k]
@@ -142,12 +142,13 @@ def _wander_range(plain: noise.PlainTransform, count: int) -> Rows:
 
 
 def _mains_band(plain: noise.PlainTransform, mains_hz: NDArray[np.float64]) -> Rows:
-    """Rows in µV within 1.5 Hz of the mains found and its third harmonic; zeros where none was found."""
+    """Rows in µV within 1.5 Hz of the mains found and its harmonics up to the fourth; zeros where none was found."""
     out = np.zeros((len(mains_hz), plain.n), dtype=np.float32)
     for hz in noise.MAINS_HZ:
         rows = np.flatnonzero(mains_hz == hz)
         if len(rows):
-            gain = sum(np.exp(-0.5 * ((plain.freq_hz - k * hz) / 1.5) ** 4) for k in (1, 2, 3, 4))
+            off_hz = plain.freq_hz[:, None] - hz * np.arange(1, 5)
+            gain = np.exp(-0.5 * (off_hz / 1.5) ** 4).sum(axis=1)
             out[rows] = fft.irfft(plain.spectrum[rows] * (1e3 * gain).astype(np.float32), n=plain.n, axis=-1)
     return out
 

@@ -59,7 +59,7 @@ def judge_faults(
     gone = lost[:, None, :].astype(np.float64)
     cost = (harm_p * (gone + WITHOUT_LOSS)).sum(axis=2)
     weight = np.where(called, there * cost, 0.0)
-    harms = lost[:, None, :] & called[:, :, None] & (harm_p >= SURE)
+    harms: NDArray[np.bool_] = lost[:, None, :] & called[:, :, None] & (harm_p >= SURE)
     _leave_no_loss_unexplained(harms, harm_p * there[:, :, None], lost, called)
     found = _windows(analysis, x_mv, fs_hz, called, flat)
     fraction = _by_windows(fraction, found.on)
@@ -83,9 +83,11 @@ def still_beside_others(x_mv: NDArray[np.float64], fs_hz: float, n_leads: int) -
     if n_leads < 2 or count < reach:
         return None
     blocks = x_mv[:, : count * width].reshape(len(x_mv), count, width)
-    high, low = blocks.max(axis=2), blocks.min(axis=2)
-    view = np.lib.stride_tricks.sliding_window_view
-    calm = view(high, reach, axis=1).max(axis=2) - view(low, reach, axis=1).min(axis=2) <= STILL_UV * 1e-3
+    # Few rows rest at all: look at a sample every 20 ms first, no QRS complex is shorter than three of them.
+    calm = _calm(blocks[:, :, :: max(1, int(0.02 * fs_hz))], reach)
+    rows = np.flatnonzero(calm.any(axis=1))
+    if len(rows):
+        calm[rows] = _calm(blocks[rows], reach)
     if not calm.any():
         return None
     by_lead = calm.reshape(-1, n_leads, calm.shape[1])
@@ -95,13 +97,25 @@ def still_beside_others(x_mv: NDArray[np.float64], fs_hz: float, n_leads: int) -
     alone = by_lead.reshape(calm.shape)
     if not alone.any():
         return None
-    still = np.zeros((len(x_mv), count), dtype=bool)
+    still: NDArray[np.bool_] = np.zeros((len(x_mv), count), dtype=bool)
+    n = alone.shape[1]
     for step in range(reach):
-        still[:, step : step + alone.shape[1]] |= alone
+        still[:, step : step + n] |= alone
     out = np.zeros(x_mv.shape, dtype=bool)
     out[:, : count * width] = np.repeat(still, width, axis=1)
     out[:, count * width :] = still[:, -1:]
     return out
+
+
+def _calm(blocks: NDArray[np.float64], reach: int) -> NDArray[np.bool_]:
+    """(R, count, width) → (R, count - reach + 1): ``reach`` blocks on end stay within STILL_UV."""
+    high, low = blocks.max(axis=2), blocks.min(axis=2)
+    n = blocks.shape[1] - reach + 1
+    top, foot = high[:, :n].copy(), low[:, :n].copy()
+    for step in range(1, reach):
+        np.maximum(top, high[:, step : step + n], out=top)
+        np.minimum(foot, low[:, step : step + n], out=foot)
+    return top - foot <= STILL_UV * 1e-3
 
 
 def held(x_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.bool_] | None:
@@ -110,18 +124,20 @@ def held(x_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.bool_] | None:
     A row whose noise moves every few samples cannot stand still that long by chance; one that often
     rests for a shorter while (coarse steps, no noise) can.
     """
-    same = np.abs(np.diff(x_mv, axis=1)) <= SAME_MV
     least = max(4, int(HELD_S * fs_hz))
-    rows = np.flatnonzero(same.sum(axis=1) >= least)
+    thin = x_mv[:, :: least // 4]  # a value held that long is met three times in a row
+    alike = np.abs(np.diff(thin, axis=1)) <= SAME_MV
+    rows = np.flatnonzero((alike[:, 1:] & alike[:, :-1]).any(axis=1))
     if not len(rows):
         return None
-    runs = runs_of(same[rows], max(2, least // 4))
+    same = np.abs(np.diff(x_mv[rows], axis=1)) <= SAME_MV
+    runs = runs_of(same, max(2, least // 4))
     long = runs.length >= least
     n_long = np.bincount(runs.row[long], minlength=len(rows))
     n_short = np.bincount(runs.row[~long], minlength=len(rows))
     inside = np.bincount(runs.row[long], runs.length[long], minlength=len(rows))
     outside = same.shape[1] - inside
-    often = (same[rows].sum(axis=1) - inside) / np.maximum(outside, 1)
+    often = (same.sum(axis=1) - inside) / np.maximum(outside, 1)
     odd = (n_long > 0) & (n_short <= n_long) & (often < OFTEN_SAME) & (outside > 0.02 * same.shape[1])
     found = runs.where(long & odd[runs.row])
     if not len(found):
@@ -142,7 +158,7 @@ def _name_the_likely(
     threshold: NDArray[np.float64],
 ) -> None:
     """Where something is lost a disturbance is called on less evidence, and the likeliest if none else is."""
-    some = lost.any(axis=1)
+    some = np.atleast_1d(lost.any(axis=1))
     learned = np.array([FAULTS.index(f) for f in LEARNED_FAULTS])
     row, k = np.nonzero(some[:, None] & (fault_p >= SUSPECT * threshold))
     fraction[row, learned[k]] = 1.0
@@ -157,10 +173,10 @@ def _harm(
 ) -> NDArray[np.float64]:
     """(R, 9, 5): P(this fault alone takes the measurement), where it is called."""
     out = np.zeros((*called.shape, len(MEASUREMENTS)))
-    columns = [FAULTS.index(f) for f in HARM_FAULTS]
+    columns = np.array([FAULTS.index(f) for f in HARM_FAULTS])
     row, kind = np.nonzero(called[:, columns])
     if len(row):
-        out[row, np.array(columns)[kind]] = model.harm(features[row], kind)
+        out[row, columns[kind]] = model.harm(features[row], kind)
     out[:, FAULTS.index("weak")] = WEAK_COSTS * called[:, [FAULTS.index("weak")]]
     out[:, FAULTS.index("narrow-band")] = called[:, [FAULTS.index("narrow-band")]]
     return out
@@ -173,8 +189,8 @@ def _leave_no_loss_unexplained(
     called: NDArray[np.bool_],
 ) -> None:
     """A lost measurement that no fault surely takes is laid to the one most likely to."""
-    open_ = lost & ~harms.any(axis=1) & called.any(axis=1)[:, None]
-    row, m = np.nonzero(open_)
+    explained: NDArray[np.bool_] = np.any(harms, axis=1) | ~np.any(called, axis=1, keepdims=True)
+    row, m = np.nonzero(lost & ~explained)
     if len(row):
         harms[row, share[row, :, m].argmax(axis=1), m] = True
         harms &= called[:, :, None]
@@ -191,7 +207,7 @@ def _windows(
     count = windows.n_windows(x_mv.shape[1] / fs_hz)
     on = np.repeat(called[:, None, :], count, axis=1)
     level = np.full(called.shape, np.nan, dtype=np.float32)
-    timed = [FAULTS.index(kind) for kind in windows.KINDS]
+    timed = np.array([FAULTS.index(kind) for kind in windows.KINDS])
     rows = np.flatnonzero(called[:, timed].any(axis=1))
     if len(rows):
         mask = qrs_mask(analysis.beat_row, analysis.beat_s, x_mv.shape, fs_hz)[rows]

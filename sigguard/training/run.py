@@ -191,7 +191,7 @@ def learn(
     arrays |= TreeArrays.join(global_trees).to_dict("global_tree_")
     harm_features, harm = harm_tasks(rows)
     harm_fits = fit_all(
-        harm_features, harm, np.zeros(len(harm_features)), seed=seed, grid=grid[:1], jobs=jobs
+        harm_features, harm, np.zeros(len(harm_features), dtype=np.int32), seed=seed, grid=grid[:1], jobs=jobs
     )
     arrays |= TreeArrays.join([f.trees for f in harm_fits]).to_dict("harm_tree_")
     arrays |= _no_calibration(len(MEASUREMENTS)).to_dict("lead_", MEASUREMENTS)
