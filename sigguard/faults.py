@@ -98,7 +98,7 @@ def still_beside_others(x_mv: NDArray[np.float64], fs_hz: float, n_leads: int) -
     if not alone.any():
         return None
     still: NDArray[np.bool_] = np.zeros((len(x_mv), count), dtype=bool)
-    n = alone.shape[1]
+    n = count - reach + 1
     for step in range(reach):
         still[:, step : step + n] |= alone
     out = np.zeros(x_mv.shape, dtype=bool)
