@@ -27,6 +27,7 @@ KEEP_ALL_HZ = 400.0  # up to this rate every sample is drawn
 MARGIN = 900  # room for the reference mark, left of the trace
 LOWEST, HIGHEST = 1500, 5000  # height of a strip
 GAP = FAULT_WORDS["missing"]
+LETTER = 160  # room for a letter of these words
 FOOT = 400  # the line under the trace that names what disturbs it
 
 
@@ -152,7 +153,7 @@ def _fault_texts(row: Segments) -> list[tuple[float, float, str]]:
     if row.details is None:
         part = [f" ({max(1, round(100 * float(f)))} %)" if f < 0.95 else "" for f in faults]
         return [(start_s, end_s, ", ".join(FAULT_WORDS[FAULTS[i]] + part[i] for i in order))]
-    where = {i: fault_stretches(row, np.array([0]), i) for i in order}
+    where = {i: _bridged(fault_stretches(row, np.array([0]), i)) for i in order}
     cuts = sorted({t for stretches in where.values() for stretch in stretches for t in stretch})
     out: list[tuple[float, float, str]] = []
     for a, b in zip(cuts[:-1], cuts[1:], strict=True):
@@ -164,6 +165,17 @@ def _fault_texts(row: Segments) -> list[tuple[float, float, str]]:
             out[-1] = (out[-1][0], b, text)
         else:
             out.append((a, b, text))
+    return out
+
+
+def _bridged(stretches: Sequence[tuple[float, float]]) -> list[tuple[float, float]]:
+    """Stretches joined over pauses of about a second, which would only chop the drawing."""
+    out: list[tuple[float, float]] = []
+    for a, b in stretches:
+        if out and a - out[-1][1] < 1.2:
+            out[-1] = (out[-1][0], b)
+        else:
+            out.append((a, b))
     return out
 
 
@@ -217,7 +229,7 @@ def strip_svg(strip: StripData) -> str:
         f'<svg class="paper" role="img" width="{width / 100:g}mm" height="{(height + foot) / 100:g}mm" '
         f'viewBox="0 0 {width} {height + foot}"><title>{escape(_title(strip))}</title>',
         paper(width, height),
-        *[_hatch(strip, d, height) for d in strip.disturbed],
+        *[_hatch(strip, d, height, named) for d, named in zip(strip.disturbed, _room(strip), strict=True)],
         *[_hatch(strip, d, height) for d in _gaps(strip)],
         _reference(height),
         # An inner drawing clips what leaves the paper.
@@ -296,7 +308,17 @@ def _gaps(strip: StripData) -> list[Disturbed]:
     ]
 
 
-def _hatch(strip: StripData, d: Disturbed, height: int) -> str:
+def _room(strip: StripData) -> list[bool]:
+    """Of each disturbed stretch whether its words have room beside those before; its title names it anyway."""
+    free_s, out = -np.inf, []
+    for d in strip.disturbed:
+        out.append(d.start_s >= free_s)
+        if out[-1]:
+            free_s = d.start_s + LETTER * len(d.text) / UNITS_PER_S
+    return out
+
+
+def _hatch(strip: StripData, d: Disturbed, height: int, named: bool = True) -> str:
     """Slanted lines over a stretch, and what is wrong there in the line under the trace.
 
     No slanted lines where somebody must look at the patient: that is to be seen, not crossed out.
@@ -318,10 +340,9 @@ def _hatch(strip: StripData, d: Disturbed, height: int) -> str:
         label = f'<text class="why" x="{(left + right) // 2}" y="{height - 120}" text-anchor="middle">{GAP}</text>'
         label = label if right - left > 1500 else ""
     elif d.text:
-        label = (
-            f'<path class="extent" d="M{left} {height + 30}v60H{right}v-60"/>'
-            f'<text class="why" x="{left + 40}" y="{height + 310}">{escape(d.text)}</text>'
-        )
+        label = f'<path class="extent" d="M{left} {height + 30}v60H{right}v-60"/>'
+        if named:
+            label += f'<text class="why" x="{left + 40}" y="{height + 310}">{escape(d.text)}</text>'
     title = f"<title>{escape(d.text)}</title>"
     hatch = f'<path class="hatch" d="{"".join(lines)}">{title}</path>' if lines else ""
     return hatch + label
