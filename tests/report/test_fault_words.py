@@ -76,7 +76,9 @@ def test_strength_and_stretches_are_in_the_document_and_validate():
 
 
 def test_the_schema_knows_every_unit():
-    known = load_schema()["properties"]["leads"]["items"]["properties"]["faults"]["items"]["properties"]["unit"]
+    known = load_schema()["properties"]["leads"]["items"]["properties"]["faults"]["items"]["properties"][
+        "unit"
+    ]
     assert set(known["enum"]) == set(STRENGTH_UNITS) - {""}
 
 
