@@ -138,7 +138,7 @@ def held(x_mv: NDArray[np.float64], fs_hz: float) -> NDArray[np.bool_] | None:
     inside = np.bincount(runs.row[long], runs.length[long], minlength=len(rows))
     outside = same.shape[1] - inside
     often = (same.sum(axis=1) - inside) / np.maximum(outside, 1)
-    odd = (n_long > 0) & (n_short <= n_long) & (often < OFTEN_SAME) & (outside > 0.02 * same.shape[1])
+    odd = (n_long > 0) & (3 * n_short <= n_long) & (often < OFTEN_SAME) & (outside > 0.02 * same.shape[1])
     found = runs.where(long & odd[runs.row])
     if not len(found):
         return None
