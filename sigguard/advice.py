@@ -8,12 +8,13 @@ is for. Time under a patient-first stretch is left out: what looks like noise th
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.electrodes import ELECTRODES, lead_rows
+from sigguard.fault_summaries import gravest
 from sigguard.findings import Advice, ElectrodeNoise, LeadSummary, PatientFirst, Placement, under_alarm
 from sigguard.grading import FAULT_WORDS
 from sigguard.segments import FAULTS, MEASUREMENTS, Segments
@@ -79,13 +80,11 @@ def _loss(segments: Segments, patient_first: Sequence[PatientFirst]) -> tuple[ND
     """(n_leads, 10) measurement-seconds lost by lead and main fault (last: none called), and all there are."""
     length_s = segments.end_s - segments.start_s
     counts = ~under_alarm(patient_first, segments.start_s, segments.end_s)
-    fault = segments.fault.copy()
-    main = np.where(fault.any(axis=1), 0, _UNEXPLAINED)
-    direct = fault.copy()
+    direct = segments.fault.copy()
     direct[:, _SIDE_FAULTS] = 0
-    has_direct = direct.any(axis=1)
-    called = main != _UNEXPLAINED
-    main[called] = np.where(has_direct, direct.argmax(axis=1), fault.argmax(axis=1))[called]
+    first = gravest(replace(segments, fault=direct))
+    first = np.where(first < 0, gravest(segments), first)
+    main = np.where(first < 0, _UNEXPLAINED, first)
     seconds = lost(segments).sum(axis=1) * length_s * counts
     n = len(segments.leads)
     loss = np.bincount(segments.lead_index * len(_KINDS) + main, seconds, minlength=n * len(_KINDS))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field, fields
-from typing import Any, cast
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,7 +13,7 @@ from sigguard.electrode_powers import ElectrodePowers
 from sigguard.lead_laws import LawBreak
 from sigguard.recording import RecordingInfo
 from sigguard.segment_pass import Part
-from sigguard.segments import Segments
+from sigguard.segments import FaultDetails, Segments
 from sigguard.stored import StoredRows
 
 LONG_ROWS = 20_000  # lead-segments from which the wide columns live on disk
@@ -48,11 +48,11 @@ class Collector:
             value = getattr(table, f.name)
             if f.name in _NAMES:
                 self._names.setdefault(f.name, value)
-            elif f.name in _WIDE and self.n_rows >= LONG_ROWS:
-                store = self._stored.get(f.name)
-                if store is None:
-                    store = self._stored[f.name] = StoredRows(value.shape[1], value.dtype)
-                store.append(value)
+            elif f.name == "details":
+                for g in fields(FaultDetails) if value is not None else ():
+                    self._store(f"details.{g.name}", getattr(value, g.name))
+            elif f.name in _WIDE:
+                self._store(f.name, value)
             else:
                 self._columns.setdefault(f.name, []).append(value)
         # Half the bytes hold any sample number of a recording shorter than two thousand million samples.
@@ -69,6 +69,15 @@ class Collector:
         self.laws.append(part.law_breaks)
         if part.global_value is not None:
             self.strips.append(part)
+
+    def _store(self, name: str, rows: NDArray) -> None:
+        """Keep rows of a wide column: on disk if the recording is long."""
+        if self.n_rows < LONG_ROWS:
+            self._columns.setdefault(name, []).append(rows)
+            return
+        if name not in self._stored:
+            self._stored[name] = StoredRows(rows.shape[1:], rows.dtype)
+        self._stored[name].append(rows)
 
     @property
     def has_data(self) -> NDArray[np.bool_]:
@@ -88,7 +97,15 @@ class Collector:
         joined: dict[str, Any] = {
             name: np.concatenate(self._columns.pop(name)) for name in list(self._columns)
         }
-        return Segments(**self._names, **joined, **cast(dict[str, Any], self._stored))
+        joined |= self._stored
+        details = {name: joined.pop(name) for name in list(joined) if name.startswith("details.")}
+        return Segments(
+            **self._names,
+            **joined,
+            details=FaultDetails(**{name.partition(".")[2]: rows for name, rows in details.items()})
+            if details
+            else None,
+        )
 
 
 def _over_leads(part: Part, info: RecordingInfo) -> NDArray[np.int64]:

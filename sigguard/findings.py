@@ -27,11 +27,18 @@ class Span:
 
 @dataclass(frozen=True, slots=True)
 class Fault:
-    """One fault of one lead: the fraction of the recording it lies on, and what it harms."""
+    """One fault of one lead: the fraction of the recording it lies on, what it harms, how strong it is and when.
+
+    ``strength`` is in ``unit`` (segments.STRENGTH_UNITS), None where there is none to give; ``when`` the
+    stretches it lies on, to about a second, empty where they are not known.
+    """
 
     kind: str
     fraction: float
     harms: tuple[str, ...] = ()
+    strength: float | None = None
+    unit: str = ""
+    when: tuple[tuple[float, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

@@ -35,6 +35,7 @@ TOLERANCE = (np.nan, 20.0, 20.0, 30.0, 0.025)
 GLOBAL_MEASUREMENTS = ("pr", "qrs", "qt")
 GLOBAL_TOLERANCE = (20.0, 20.0, 30.0)
 LEARNED_FAULTS = ("wander", "muscle", "mains", "motion")
+HARM_FAULTS = (*LEARNED_FAULTS, "flat", "clipped", "missing")  # of which it is learned what they take
 PROMISE = 0.95  # the share that keeps to the bound
 LOCAL = 0.90  # the share of named absences asked for at any single score
 
@@ -141,6 +142,9 @@ class ReliabilityModel:
     global_calibration: Calibration
     fault_threshold: Array  # (4,): a fault is called from this probability on
     sha256: str
+    harm_trees: TreeEnsemble | None = (
+        None  # a model for each measurement; the last input is the fault's number
+    )
 
     @classmethod
     def load(
@@ -207,6 +211,7 @@ class ReliabilityModel:
             global_calibration=Calibration.from_dict(arrays, "global_", GLOBAL_MEASUREMENTS),
             fault_threshold=threshold,
             sha256=sha256,
+            harm_trees=_harm_trees(arrays, len(names)),
         )
 
     def judge(self, features: NDArray[np.floating]) -> tuple[Array, Array]:
@@ -221,6 +226,16 @@ class ReliabilityModel:
     def faults(self, features: NDArray[np.floating]) -> Array:
         """(n, F) → (n, 4): P(this disturbance alone would break a measurement), per LEARNED_FAULTS."""
         return self.judge(features)[1]
+
+    def harm(self, features: NDArray[np.floating], fault: NDArray[np.integer]) -> Array:
+        """(n, F) features and (n,) index into HARM_FAULTS → (n, 5): P(this fault alone takes the measurement).
+
+        A half throughout for a model that was not taught it.
+        """
+        if self.harm_trees is None:
+            return np.full((len(fault), len(MEASUREMENTS)), 0.5)
+        table = np.column_stack([finite_or_nan(features), fault])
+        return self.harm_trees.predict_proba(table)
 
     def bound(self, scores: Array) -> Array:
         """(n, 5) scores → (n, 5) bound_95 in 1/min, ms, ms, ms, mV; inf where none can be given."""
@@ -272,7 +287,13 @@ class ReliabilityModel:
             "probe_share": self.calibration.shares(score),
             "probe_global_score": score_global,
             "probe_global_bound": self.bound_global(score_global),
+            **self._harm_answers(features),
         }
+
+    def _harm_answers(self, features: NDArray[np.floating]) -> dict[str, Array]:
+        if self.harm_trees is None:
+            return {}
+        return {"probe_harm": self.harm(features, np.arange(len(features)) % len(HARM_FAULTS))}
 
     def _prove(self, arrays: Mapping[str, NDArray], name: str) -> None:
         try:
@@ -319,6 +340,15 @@ def qtc_bound(
     """
     qtc = qt_ms * (rate / 60.0) ** exponent
     return qtc * (qt_bound_ms / qt_ms + exponent * rate_bound / rate)
+
+
+def _harm_trees(arrays: Mapping[str, NDArray], n_features: int) -> TreeEnsemble | None:
+    if "harm_tree_feature" not in arrays:
+        return None
+    trees = TreeArrays.from_dict(arrays, "harm_tree_")
+    if trees.n_models != len(MEASUREMENTS):
+        raise ModelError("the model holds another number of harm models than expected; train it again")
+    return TreeEnsemble.build(trees, n_features + 1)
 
 
 def _same_names(what: str, trained: tuple[str, ...], running: Sequence[str] | None) -> None:

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from sigguard.blocks import Batch, SegmentPlan, batches, rows_of
 from sigguard.electrode_powers import ElectrodePowers, electrode_powers
+from sigguard.faults import judge_faults
 from sigguard.features import FEATURE_NAMES
 from sigguard.global_values import GLOBAL_FEATURE_NAMES, analyse_global
 from sigguard.grading import grade_rows
@@ -25,7 +26,6 @@ from sigguard.segments import Segments
 from sigguard.verdicts import (
     NO_WAVE,
     agreeing_leads,
-    fault_rows,
     hardly_there,
     judge_rows,
     limit_by_recording,
@@ -154,8 +154,9 @@ def _measure_batch(
     lead_beats = [at[analysis.beat_row % n_leads == k] for k in range(n_leads)]
     strips = n_leads > 1 and info.duration_s <= GLOBAL_MOST_S
     common = _global_part(rows, batch, analysis, model, profile, plan, fs_hz, n_leads) if strips else {}
-    segments = _table(info, plan, batch, lead_index, analysis, model, profile, common.get("agree"))
-    core = rows[:, batch.margin[0] : rows.shape[1] - batch.margin[1]].reshape(batch.count, n_leads, -1)
+    core_rows = rows[:, batch.margin[0] : rows.shape[1] - batch.margin[1]]
+    core = core_rows.reshape(batch.count, n_leads, -1)
+    segments = _table(info, plan, batch, lead_index, core_rows, analysis, model, profile, common.get("agree"))
     hum = analysis.features[:, [FEATURE_NAMES.index("mains_hz"), FEATURE_NAMES.index("mains_uv")]]
     powers = electrode_powers(
         core,
@@ -190,6 +191,7 @@ def _table(
     plan: SegmentPlan,
     batch: Batch,
     lead_index: NDArray[np.intp],
+    core_mv: NDArray[np.float64],
     analysis: Analysis,
     model: ReliabilityModel,
     profile: Profile,
@@ -205,6 +207,16 @@ def _table(
     absent = np.where(hidden & (absent == NO_WAVE), named, absent).astype(np.int8)
     value = np.where(absent > 0, np.nan, analysis.value)
     bound = np.where(absent > 0, np.nan, bound)
+    fault, details = judge_faults(
+        model,
+        analysis,
+        core_mv,
+        info.fs_hz,
+        fault_p=fault_p,
+        lost=~reliable & (absent == 0),
+        limited=limited,
+        n_leads=info.n_leads,
+    )
     which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
     return Segments(
         leads=info.leads,
@@ -218,8 +230,9 @@ def _table(
         reliable=reliable,
         absent=absent,
         grade=grade_rows(reliable, absent),
-        fault=fault_rows(model, analysis.features, fault_p, limited, batch.size / info.fs_hz),
+        fault=fault,
         features=analysis.features,
+        details=details,
     )
 
 

@@ -11,11 +11,11 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from sigguard.findings import BestStrip, Fault, LeadSummary, Span
+from sigguard.fault_summaries import lead_faults
+from sigguard.findings import BestStrip, LeadSummary, Span
 from sigguard.segments import FAULTS, GRADES, MEASUREMENTS, Segments
 
 MAX_SPANS = 2000
-HARM_SHARE = 0.1  # a fault harms a measurement that is lost on at least this share of the fault's time
 FAULT_SHARE = 0.05  # a span names a fault that lies on at least this share of it
 _NO_ROW = 127  # grade of a lead for which the table has no row at that time
 _SAME_TIME_S = 1e-6
@@ -99,14 +99,12 @@ def longest_run(segments: Segments, column: NDArray[np.bool_]) -> tuple[float, i
 def lead_summaries(segments: Segments) -> tuple[LeadSummary, ...]:
     """Each lead over the whole table, as shares of its time; a lead without rows is ``none`` throughout.
 
-    A fault harms the measurements that are neither reliable nor absent on at least a tenth of the
-    time of the segments it lies on. Faults come with the largest fraction first.
+    Faults come as ``fault_summaries.lead_faults`` orders them: what costs the most first.
     """
     length_s = segments.end_s - segments.start_s
     # One kind of float throughout, or the products below would not go through BLAS.
     bad = lost(segments).astype(np.float64)
     reliable = segments.reliable.astype(np.float64)
-    fault = segments.fault.astype(np.float64)
     out = []
     for index, lead in enumerate(segments.leads):
         rows = np.flatnonzero(segments.lead_index == index)
@@ -119,7 +117,7 @@ def lead_summaries(segments: Segments) -> tuple[LeadSummary, ...]:
                 lead=lead,
                 grade_fraction={name: _share(grades[GRADES.index(name)]) for name in reversed(GRADES)},
                 reliable_fraction=dict(zip(MEASUREMENTS, map(_share, weight @ reliable[rows]), strict=True)),
-                faults=_faults(fault[rows], bad[rows], weight),
+                faults=lead_faults(segments, rows, bad),
             )
         )
     return tuple(out)
@@ -128,22 +126,6 @@ def lead_summaries(segments: Segments) -> tuple[LeadSummary, ...]:
 def _share(value: float) -> float:
     """A share from 0 to 1 without the last digits that adding up leaves."""
     return round(min(max(float(value), 0.0), 1.0), 9)
-
-
-def _faults(fault: NDArray, bad: NDArray, weight: NDArray) -> tuple[Fault, ...]:
-    fraction = weight @ fault
-    touched = (fault > 0) * weight[:, np.newaxis]
-    harm = touched.T @ bad  # (9, 5): share of the time with this fault and without this measurement
-    harmed = (harm > 0) & (harm >= HARM_SHARE * touched.sum(axis=0)[:, np.newaxis])
-    order = [k for k in np.argsort(-fraction, kind="stable") if fraction[k] > 0]
-    return tuple(
-        Fault(
-            FAULTS[k],
-            _share(fraction[k]),
-            tuple(m for m, hit in zip(MEASUREMENTS, harmed[k], strict=True) if hit),
-        )
-        for k in order
-    )
 
 
 # ── spans ──

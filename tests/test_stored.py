@@ -7,7 +7,7 @@ from sigguard.stored import StoredRows
 @pytest.fixture
 def both():
     table = np.random.default_rng(1).normal(size=(50, 4))
-    stored = StoredRows(4, np.float64)
+    stored = StoredRows((4,), np.float64)
     for first in range(0, 50, 20):
         stored.append(table[first : first + 20])
     return stored, table
@@ -54,7 +54,7 @@ def test_what_is_read_is_a_copy(both) -> None:
 
 def test_a_wrong_width_or_row_is_an_error(both) -> None:
     stored, _ = both
-    with pytest.raises(ValueError, match="4 columns"):
+    with pytest.raises(ValueError, match="shape"):
         stored.append(np.zeros((1, 3)))
     with pytest.raises(IndexError):
         stored[50]
@@ -63,6 +63,15 @@ def test_a_wrong_width_or_row_is_an_error(both) -> None:
 
 
 def test_single_precision_is_kept_in_single() -> None:
-    stored = StoredRows(2, np.float32)
+    stored = StoredRows((2,), np.float32)
     stored.append(np.array([[1.5, np.nan]]))
     assert stored[:].dtype == np.float32 and np.isnan(stored[0, 1])
+
+
+def test_rows_of_more_than_one_axis() -> None:
+    table = np.arange(60).reshape(5, 3, 4) % 7 == 0
+    stored = StoredRows((3, 4), bool)
+    stored.append(table)
+    assert stored.shape == (5, 3, 4) and stored.ndim == 3
+    np.testing.assert_array_equal(stored[np.array([4, 1]), 2], table[np.array([4, 1]), 2])
+    np.testing.assert_array_equal(stored[1:3, :, 0], table[1:3, :, 0])

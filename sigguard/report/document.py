@@ -20,6 +20,7 @@ from sigguard.findings import (
     BestStrip,
     CommonNoise,
     ElectrodeNoise,
+    Fault,
     Judgement,
     LeadSummary,
     PatientFirst,
@@ -254,11 +255,21 @@ def _lead(summary: LeadSummary) -> dict[str, Any]:
         "reliable_fraction": {
             m: number(summary.reliable_fraction.get(m, 0.0), 4) or 0.0 for m in MEASUREMENTS
         },
-        "faults": [
-            {"kind": f.kind, "fraction": number(f.fraction, 4) or 0.0, "harms": list(f.harms)}
-            for f in summary.faults
-        ],
+        "faults": [_fault(f) for f in summary.faults],
     }
+
+
+def _fault(fault: Fault) -> dict[str, Any]:
+    out: dict[str, Any] = {
+        "kind": fault.kind,
+        "fraction": number(fault.fraction, 4) or 0.0,
+        "harms": list(fault.harms),
+    }
+    if fault.strength is not None and (strength := number(fault.strength, 3)) is not None:
+        out |= {"strength": strength, "unit": fault.unit}
+    if fault.when:
+        out["when"] = [[number(a, 3), number(b, 3)] for a, b in fault.when]
+    return out
 
 
 @cache

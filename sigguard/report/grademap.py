@@ -8,6 +8,7 @@ from html import escape
 import numpy as np
 from numpy.typing import NDArray
 
+from sigguard.fault_summaries import gravest
 from sigguard.report.document import Report
 from sigguard.report.words import ALARM_WORDS, FAULT_WORDS, GRADE_WORDS, alarm_between, clean, clock
 from sigguard.segments import FAULTS, GRADES, Segments
@@ -157,9 +158,9 @@ def _words(report: Report, lead: int) -> list[str]:
     """
     mine = report.segments.rows(report.segments.lead_index == lead)
     words = []
-    for start_s, end_s, fault in zip(mine.start_s.tolist(), mine.end_s.tolist(), mine.fault, strict=True):
-        k = int(fault.argmax())
-        name = FAULT_WORDS[FAULTS[k]] if fault[k] > 0 else ""
+    first = gravest(mine).tolist()
+    for start_s, end_s, k in zip(mine.start_s.tolist(), mine.end_s.tolist(), first, strict=True):
+        name = FAULT_WORDS[FAULTS[k]] if k >= 0 else ""
         words.append(ALARM_WORDS if alarm_between(report.patient_first, start_s, end_s) else name)
     return words
 

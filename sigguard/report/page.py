@@ -28,6 +28,7 @@ from sigguard.report.words import (
     clean,
     clock,
     listing,
+    strength_words,
     stretch,
 )
 from sigguard.segments import GRADES
@@ -195,10 +196,11 @@ def _st_tables(report: Report) -> list[list[tuple[str, MeasurementRow]]]:
 
 def _lead_row(summary: LeadSummary) -> LeadRow:
     faults = []
-    for f in sorted(summary.faults, key=lambda f: -f.fraction):
+    for f in summary.faults:
         harms = listing(SHORT_WORDS.get(m, m) for m in f.harms)
+        size = f", {strength_words(f.strength, f.unit)}" if f.strength is not None else ""
         faults.append(
-            f"{FAULT_WORDS[f.kind]}, {_percent(f.fraction)}" + (f": harms {harms}" if harms else "")
+            f"{FAULT_WORDS[f.kind]}{size}, {_percent(f.fraction)}" + (f": harms {harms}" if harms else "")
         )
     return LeadRow(
         summary.lead,

@@ -14,9 +14,10 @@ from math import ceil
 import numpy as np
 from numpy.typing import NDArray
 
+from sigguard.fault_summaries import fault_stretches
 from sigguard.report.document import Report
 from sigguard.report.words import ALARM_WORDS, FAULT_WORDS, GRADE_WORDS, alarm_between, clean, clock, listing
-from sigguard.segments import FAULTS, GRADES
+from sigguard.segments import FAULTS, GRADES, Segments
 
 UNITS_PER_S, UNITS_PER_MV = 2500, 1000
 STRIP_S = 10.0
@@ -26,6 +27,7 @@ KEEP_ALL_HZ = 400.0  # up to this rate every sample is drawn
 MARGIN = 900  # room for the reference mark, left of the trace
 LOWEST, HIGHEST = 1500, 5000  # height of a strip
 GAP = FAULT_WORDS["missing"]
+LETTER = 160  # room for a letter of these words
 FOOT = 400  # the line under the trace that names what disturbs it
 
 
@@ -119,23 +121,62 @@ def _strip(report: Report, x_mv: NDArray[np.float64], lead_index: int, start: in
         rows = segments.rows(mine & (segments.start_s < end_s - 0.05) & (segments.end_s > start_s + 0.05))
         if len(rows):
             grade = GRADES[int(rows.grade.min())]
-        for t0, t1, faults in zip(rows.start_s.tolist(), rows.end_s.tolist(), rows.fault, strict=True):
-            alarm = alarm_between(report.patient_first, max(t0, start_s), min(t1, end_s))
-            if (text := ALARM_WORDS if alarm else _fault_text(faults)) != "":
-                disturbed.append(Disturbed(max(t0, start_s), min(t1, end_s), text))
+        for k in range(len(rows)):
+            one = rows.rows(np.array([k]))
+            t0, t1 = float(one.start_s[0]), float(one.end_s[0])
+            if alarm_between(report.patient_first, max(t0, start_s), min(t1, end_s)):
+                found = [(t0, t1, ALARM_WORDS)]
+            else:
+                found = _fault_texts(one)
+            disturbed += [
+                Disturbed(max(a, start_s), min(b, end_s), text)
+                for a, b, text in found
+                if min(b, end_s) - max(a, start_s) > 0.05
+            ]
     return StripData(
         lead, start_s, x_mv, info.fs_hz, beats[first:last] - start, tuple(disturbed), heading, grade
     )
 
 
-def _fault_text(faults: NDArray[np.floating]) -> str:
-    """``movement (20 %), mains hum``: the worst first, the part of the segment where it is not the whole."""
-    found = []
-    for i in np.argsort(-faults, kind="stable"):
-        if faults[i] > 0:
-            part = f" ({max(1, round(100 * float(faults[i])))} %)" if faults[i] < 0.95 else ""
-            found.append(FAULT_WORDS[FAULTS[i]] + part)
-    return ", ".join(found)
+def _fault_texts(row: Segments) -> list[tuple[float, float, str]]:
+    """(start_s, end_s, ``movement, mains hum``) of the stretches of one row: the costliest first.
+
+    Where the table does not know when a fault lies there, the whole row with the share of each.
+    """
+    start_s, end_s, faults = float(row.start_s[0]), float(row.end_s[0]), row.fault[0]
+    worth = (
+        faults if row.details is None else np.where(faults > 0, row.details.weight[0] + 1e-6 * faults, 0.0)
+    )
+    order = [int(i) for i in np.argsort(-worth, kind="stable") if faults[i] > 0]
+    if not order:
+        return []
+    if row.details is None:
+        part = [f" ({max(1, round(100 * float(f)))} %)" if f < 0.95 else "" for f in faults]
+        return [(start_s, end_s, ", ".join(FAULT_WORDS[FAULTS[i]] + part[i] for i in order))]
+    where = {i: _bridged(fault_stretches(row, np.array([0]), i)) for i in order}
+    cuts = sorted({t for stretches in where.values() for stretch in stretches for t in stretch})
+    out: list[tuple[float, float, str]] = []
+    for a, b in zip(cuts[:-1], cuts[1:], strict=True):
+        here = [i for i in order if any(s <= a and b <= e for s, e in where[i])]
+        text = ", ".join(FAULT_WORDS[FAULTS[i]] for i in here)
+        if not text:
+            continue
+        if out and out[-1][2] == text and out[-1][1] == a:
+            out[-1] = (out[-1][0], b, text)
+        else:
+            out.append((a, b, text))
+    return out
+
+
+def _bridged(stretches: Sequence[tuple[float, float]]) -> list[tuple[float, float]]:
+    """Stretches joined over pauses of about a second, which would only chop the drawing."""
+    out: list[tuple[float, float]] = []
+    for a, b in stretches:
+        if out and a - out[-1][1] < 1.2:
+            out[-1] = (out[-1][0], b)
+        else:
+            out.append((a, b))
+    return out
 
 
 def trace_path(x_uv: NDArray[np.float64], *, fs_hz: float, left: int, zero: float) -> str:
@@ -188,7 +229,7 @@ def strip_svg(strip: StripData) -> str:
         f'<svg class="paper" role="img" width="{width / 100:g}mm" height="{(height + foot) / 100:g}mm" '
         f'viewBox="0 0 {width} {height + foot}"><title>{escape(_title(strip))}</title>',
         paper(width, height),
-        *[_hatch(strip, d, height) for d in strip.disturbed],
+        *[_hatch(strip, d, height, named) for d, named in zip(strip.disturbed, _room(strip), strict=True)],
         *[_hatch(strip, d, height) for d in _gaps(strip)],
         _reference(height),
         # An inner drawing clips what leaves the paper.
@@ -267,7 +308,17 @@ def _gaps(strip: StripData) -> list[Disturbed]:
     ]
 
 
-def _hatch(strip: StripData, d: Disturbed, height: int) -> str:
+def _room(strip: StripData) -> list[bool]:
+    """Of each disturbed stretch whether its words have room beside those before; its title names it anyway."""
+    free_s, out = -np.inf, []
+    for d in strip.disturbed:
+        out.append(d.start_s >= free_s)
+        if out[-1]:
+            free_s = d.start_s + LETTER * len(d.text) / UNITS_PER_S
+    return out
+
+
+def _hatch(strip: StripData, d: Disturbed, height: int, named: bool = True) -> str:
     """Slanted lines over a stretch, and what is wrong there in the line under the trace.
 
     No slanted lines where somebody must look at the patient: that is to be seen, not crossed out.
@@ -289,10 +340,9 @@ def _hatch(strip: StripData, d: Disturbed, height: int) -> str:
         label = f'<text class="why" x="{(left + right) // 2}" y="{height - 120}" text-anchor="middle">{GAP}</text>'
         label = label if right - left > 1500 else ""
     elif d.text:
-        label = (
-            f'<path class="extent" d="M{left} {height + 30}v60H{right}v-60"/>'
-            f'<text class="why" x="{left + 40}" y="{height + 310}">{escape(d.text)}</text>'
-        )
+        label = f'<path class="extent" d="M{left} {height + 30}v60H{right}v-60"/>'
+        if named:
+            label += f'<text class="why" x="{left + 40}" y="{height + 310}">{escape(d.text)}</text>'
     title = f"<title>{escape(d.text)}</title>"
     hatch = f'<path class="hatch" d="{"".join(lines)}">{title}</path>' if lines else ""
     return hatch + label

@@ -107,6 +107,17 @@ def clock(t_s: float, *, decimals: int = 0) -> str:
     return f"{minutes}:{seconds:02d}{tail}"
 
 
+def strength_words(value: float, unit: str) -> str:
+    """``25 µV rms``, ``1.2 mV range``, ``2.0 s``."""
+    size, _, kind = unit.partition(" ")
+    if size == "s":
+        return f"{value:.1f} s"
+    amount = (
+        f"{value / 1000:.1f} mV" if value >= 999.5 else f"{value:.2g} µV" if value < 10 else f"{value:.0f} µV"
+    )
+    return f"{amount} {kind}".strip()
+
+
 def stretch(start_s: float, end_s: float) -> str:
     """``from 2:05 to 2:15``, with tenths where the stretch is short."""
     decimals = 1 if end_s - start_s < 20 else 0

@@ -158,7 +158,7 @@ def _faults(faults: list[FaultScore]) -> list[str]:
     out = [
         "## Faults",
         "",
-        "Truth: this disturbance alone would have broken a measurement.",
+        "Truth: this disturbance alone moved a measurement by more than half its tolerance, lost or invented one.",
         "",
         "| fault | rows | lies there | recall | precision |",
         "|---|---|---|---|---|",

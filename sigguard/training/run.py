@@ -189,6 +189,11 @@ def learn(
     }
     arrays |= TreeArrays.join([f.trees for f in lead]).to_dict("lead_tree_")
     arrays |= TreeArrays.join(global_trees).to_dict("global_tree_")
+    harm_features, harm = harm_tasks(rows)
+    harm_fits = fit_all(
+        harm_features, harm, np.zeros(len(harm_features), dtype=np.int32), seed=seed, grid=grid[:1], jobs=jobs
+    )
+    arrays |= TreeArrays.join([f.trees for f in harm_fits]).to_dict("harm_tree_")
     arrays |= _no_calibration(len(MEASUREMENTS)).to_dict("lead_", MEASUREMENTS)
     arrays |= _no_calibration(len(GLOBAL_MEASUREMENTS)).to_dict("global_", GLOBAL_MEASUREMENTS)
     # The scores that calibrate are those of the model as it will run, not of the library that grew it.
@@ -204,6 +209,18 @@ def lead_tasks(rows: Rows, feature_names: tuple[str, ...]) -> list[Task]:
     tasks = [Task(m, rows.right[:, k], rows.judged[:, k], down) for k, m in enumerate(MEASUREMENTS)]
     tasks += [Task(f, rows.fault[:, k], rows.fault_asked[:, k]) for k, f in enumerate(LEARNED_FAULTS)]
     return tasks
+
+
+def harm_tasks(rows: Rows) -> tuple[NDArray[np.float32], list[Task]]:
+    """What each fault takes: (k, F + 1) features with the fault's number last, and a question a measurement.
+
+    A row gives an entry for each fault that lies on it and of which is known what it does by itself.
+    """
+    row, fault = np.nonzero((rows.harm >= 0).any(axis=2))
+    table = np.column_stack([rows.features[row], fault]).astype(np.float32)
+    answers = rows.harm[row, fault]
+    tasks = [Task(f"harm {m}", answers[:, k] == 1, answers[:, k] >= 0) for k, m in enumerate(MEASUREMENTS)]
+    return table, tasks
 
 
 def calibration_groups(rows: Rows) -> NDArray[np.bool_]:

@@ -5,17 +5,20 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from sigguard.reliability import GLOBAL_TOLERANCE, LEARNED_FAULTS
+from sigguard.reliability import GLOBAL_TOLERANCE, LEARNED_FAULTS, TOLERANCE
 from sigguard.simulate.recipes import TrainingRecipe
 from sigguard.simulate.recorded import PARTS, RECORDED_KINDS, qrs_peak_to_peak_mv
 from sigguard.training.carriers import Carrier, real_carrier, simulated_carrier
-from sigguard.training.labels import Measured, label_rows, label_values
+from sigguard.training.labels import Labels, Measured, label_rows, label_values
 from sigguard.training.spoil import (
     FAULT_OF,
+    STRONGER_DB,
+    TRANSFORM_FAULT,
     NoiseSource,
     SpoiltRow,
     draw_kinds,
     fault_truth,
+    harm_truth,
     spoil_row,
     spoil_strip,
 )
@@ -23,6 +26,9 @@ from sigguard.training.table import GROUPS, Chunk, Procedure, Rows
 
 CELL_KINDS = ("recorded-bw", "recorded-ma", "recorded-em", "muscle", "motion", "mains")
 CELL_DRAWS = 10
+FELT = 0.5  # share of the tolerance
+TOLD = 0.5  # share of the rows whose header tells the converter's step and rails
+USUAL_RAIL_MV = 5.0
 
 
 def run_chunk(
@@ -56,7 +62,8 @@ def _run_rows(
     fs_hz = carriers[0].fs_hz
     clean_mv = np.stack([carriers[k].signal_mv[lead] for k, lead in picked])
     step_mv = np.array([carriers[k].step_mv for k, _ in picked])
-    clean = procedure.analyse(_stepped(clean_mv, step_mv), fs_hz)
+    told_mv = np.where(rng.random(len(picked)) < TOLD, step_mv, np.nan)  # a header may say the step, or not
+    clean = procedure.analyse(_stepped(clean_mv, step_mv), fs_hz, step_mv=told_mv)
     qrs_mv = np.array([carriers[k].qrs_mv[lead] for k, lead in picked])
     qrs_mv = _with_measured_qrs(qrs_mv, clean, clean_mv, fs_hz)
     spoilt: list[SpoiltRow] = []
@@ -73,11 +80,12 @@ def _run_rows(
                     step_mv=float(step_mv[row]),
                     fs_hz=fs_hz,
                     source=source,
+                    stronger={} if number >= 0 else STRONGER_DB,  # cells keep to the ratio asked for
                 )
             )
             of.append(row)
             cell.append(number)
-    return _judge_rows(chunk, clean, spoilt, np.array(of), np.array(cell), picked, fs_hz, procedure)
+    return _judge_rows(chunk, clean, spoilt, np.array(of), np.array(cell), picked, told_mv, fs_hz, procedure)
 
 
 def _judge_rows(
@@ -87,24 +95,18 @@ def _judge_rows(
     of: NDArray[np.intp],
     cell: NDArray[np.intp],
     picked: list[tuple[int, int]],
+    told_mv: NDArray[np.float64],
     fs_hz: float,
     procedure: Procedure,
 ) -> Rows:
     duration_s = spoilt[0].x_mv.shape[0] / fs_hz
-    found = procedure.analyse(np.stack([row.x_mv for row in spoilt]), fs_hz)
+    step_mv, rails_mv = _header(spoilt, told_mv[of])
+    found = procedure.analyse(
+        np.stack([row.x_mv for row in spoilt]), fs_hz, step_mv=step_mv, rails_mv=rails_mv
+    )
     labels = label_rows(clean, found, duration_s, of=of)
-    broke = np.any(labels.judged & ~labels.right, axis=1)
-    harmed = [
-        {kind: bool(broke[r]) for kind in row.kinds if len(row.kinds) == 1 and kind in FAULT_OF}
-        for r, row in enumerate(spoilt)
-    ]
-    alone = [(r, kind, x) for r, row in enumerate(spoilt) for kind, x in row.alone]
-    if alone:
-        run = procedure.analyse(np.stack([x for _, _, x in alone]), fs_hz)
-        each = label_rows(clean, run, duration_s, of=of[[r for r, _, _ in alone]])
-        for (r, kind, _), bad in zip(alone, np.any(each.judged & ~each.right, axis=1), strict=True):
-            harmed[r][kind] = bool(bad)
-    fault, asked = fault_truth([row.kinds for row in spoilt], harmed)
+    felt, taken = _alone(clean, spoilt, of, labels, told_mv, fs_hz, procedure)
+    fault, asked = fault_truth([row.kinds for row in spoilt], felt)
     n = len(spoilt)
     return Rows(
         features=np.asarray(found.features, dtype=np.float32),
@@ -114,6 +116,7 @@ def _judge_rows(
         error=labels.error,
         fault=fault,
         fault_asked=asked,
+        harm=harm_truth(taken),
         carrier=np.array([chunk.first_carrier + picked[r][0] for r in of], dtype=np.int32),
         group=np.array([group_of(row.kinds) for row in spoilt], dtype=np.int8),
         real=np.full(n, bool(chunk.real)),
@@ -122,6 +125,68 @@ def _judge_rows(
         snr_db=np.array([row.snr_db for row in spoilt]),
         fs_hz=np.full(n, fs_hz),
     )
+
+
+def _alone(
+    clean: Measured,
+    spoilt: list[SpoiltRow],
+    of: NDArray[np.intp],
+    labels: Labels,
+    told_mv: NDArray[np.float64],
+    fs_hz: float,
+    procedure: Procedure,
+) -> tuple[list[dict[str, bool]], list[dict[str, NDArray[np.int8]]]]:
+    """What each disturbance does by itself, row by row: whether it is felt by kind, and what it takes by fault."""
+    felt_here, taken_here = _felt(labels), _taken(labels)
+    felt: list[dict[str, bool]] = [{} for _ in spoilt]
+    taken: list[dict[str, NDArray[np.int8]]] = [{} for _ in spoilt]
+    for r, row in enumerate(spoilt):
+        if len(row.kinds) != 1:
+            continue
+        kind = row.kinds[0]
+        if kind in FAULT_OF:
+            felt[r][kind] = bool(felt_here[r])
+            taken[r][FAULT_OF[kind]] = taken_here[r]
+        elif kind in TRANSFORM_FAULT:
+            lost = bool(np.isnan(row.x_mv).any())
+            taken[r]["missing" if lost else TRANSFORM_FAULT[kind]] = taken_here[r]
+    each = [(r, kind, x) for r, row in enumerate(spoilt) for kind, x in row.alone]
+    if each:
+        base = of[[r for r, _, _ in each]]
+        run = procedure.analyse(np.stack([x for _, _, x in each]), fs_hz, step_mv=told_mv[base])
+        judged = label_rows(clean, run, spoilt[0].x_mv.shape[0] / fs_hz, of=base)
+        for (r, kind, _), hit, answers in zip(each, _felt(judged), _taken(judged), strict=True):
+            felt[r][kind] = bool(hit)
+            before = taken[r].get(FAULT_OF[kind], answers)
+            taken[r][FAULT_OF[kind]] = np.maximum(before, answers)
+    return felt, taken
+
+
+def _header(
+    spoilt: list[SpoiltRow], told_mv: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Steps (n,) and rails (n, 2) as a header tells them, NaN where it does not."""
+    coarse = np.array(["quantisation" in row.kinds for row in spoilt])
+    rails_mv = np.array([row.rails_mv for row in spoilt])
+    reach_mv = np.array([np.nanmax(np.abs(row.x_mv), initial=0.0) for row in spoilt])
+    wide_mv = np.maximum(USUAL_RAIL_MV, reach_mv + 1.0)  # a converter whose rails nothing touches
+    rails_mv = np.where(np.isnan(rails_mv), wide_mv[:, None] * (-1.0, 1.0), rails_mv)
+    rails_mv[np.isnan(told_mv)] = np.nan
+    return np.where(coarse, np.nan, told_mv), rails_mv
+
+
+def _felt(labels: Labels) -> NDArray[np.bool_]:
+    """(n,): some measurement was moved by more than a share of its tolerance, lost or invented.
+
+    A measurement is not to be trusted well before the disturbance moves it by the whole tolerance.
+    """
+    moved = labels.error > FELT * np.asarray((np.inf, *TOLERANCE[1:]))
+    return np.any(labels.judged & (~labels.right | moved), axis=1)
+
+
+def _taken(labels: Labels) -> NDArray[np.int8]:
+    """(n, 5): 1 moved beyond the tolerance, 0 not, -1 nothing to judge."""
+    return np.where(labels.judged, (~labels.right).astype(np.int8), np.int8(-1))
 
 
 def _run_strips(
@@ -163,6 +228,7 @@ def _run_strips(
         error=labels.error,
         fault=np.zeros((n, len(LEARNED_FAULTS)), dtype=bool),
         fault_asked=np.zeros((n, len(LEARNED_FAULTS)), dtype=bool),
+        harm=harm_truth([{} for _ in range(n)]),
         carrier=(chunk.first_carrier + np.array(of)).astype(np.int32),
         group=np.array([group_of(kinds) for kinds in kinds_of], dtype=np.int8),
         real=np.full(n, bool(chunk.real)),

@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import lru_cache
+from types import MappingProxyType
 
 import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.errors import UsageError
-from sigguard.reliability import LEARNED_FAULTS
+from sigguard.reliability import HARM_FAULTS, LEARNED_FAULTS
+from sigguard.segments import MEASUREMENTS
 from sigguard.simulate.disturbance import (
     ADDITIVE_KINDS,
     apply_clipping,
@@ -36,10 +39,19 @@ FAULT_OF = {
     "excursion": "motion",
     "recorded-em": "motion",
 }
-# Kinds whose content beside the named fault is not known, so that silence about the others is no truth.
-UNCLEAR = ("recorded-bw", "recorded-ma", "recorded-em", "lead-off", "clipping")
+TRANSFORM_FAULT = {
+    "clipping": "clipped",
+    "dropout": "flat",
+    "lead-off": "flat",
+}  # a dropout that is not held: missing
+# Kinds that bring or bend other disturbances, so that silence about those is no truth. Recorded noise is not among
+# them: bw, ma and em each hold something of the others, and are to be named by what they are chiefly.
+UNCLEAR = ("lead-off", "clipping")
+# Decibels by which a kind is laid on more strongly: where the waves are measured, little is left of hum and drift.
+STRONGER_DB = {"mains": 14.0, "wander": 5.0, "recorded-bw": 5.0}
 _NOMINAL_QRS_MV = 1.0  # scales the noise where there is no QRS
 _LEAST_QRS_MV = 0.1
+_AS_ASKED: Mapping[str, float] = MappingProxyType({})
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,6 +97,7 @@ class SpoiltRow:
     kinds: tuple[str, ...]
     snr_db: float  # of all additive noise together; NaN without
     alone: tuple[tuple[str, Array], ...]
+    rails_mv: tuple[float, float] = (np.nan, np.nan)  # where it was clipped
 
 
 def draw_kinds(rng: np.random.Generator, source: NoiseSource) -> tuple[str, ...]:
@@ -106,11 +119,12 @@ def spoil_row(
     step_mv: float,
     fs_hz: float,
     source: NoiseSource,
+    stronger: Mapping[str, float] = _AS_ASKED,
 ) -> SpoiltRow:
     """(n_samples,) clean and disturbances → the spoilt row, in the recorder's steps.
 
     ``snr_db`` (noise-stress definition) is that of the additive noise together, shared at random
-    among its kinds. ``qrs_mv`` is the row's QRS peak to peak; NaN or tiny ones are taken as a nominal size.
+    among its kinds; ``stronger`` names kinds laid on by so many decibels more. ``qrs_mv`` is the row's QRS peak to peak; NaN or tiny ones are taken as a nominal size.
     """
     additive = [k for k in kinds if k in FAULT_OF]
     transforms = [k for k in kinds if k not in FAULT_OF]
@@ -120,10 +134,16 @@ def spoil_row(
     noise = []
     for kind, share in zip(additive, shares, strict=True):
         x = source.noise(rng, kind, n_samples=len(clean_mv), fs_hz=fs_hz)
-        noise.append(x * (share * snr_gain(size, x, snr_db, fs_hz)))
+        noise.append(x * (share * snr_gain(size, x, snr_db - stronger.get(kind, 0.0), fs_hz)))
     x_mv = clean_mv + np.sum(noise, axis=0) if noise else clean_mv
+    rails_mv = (np.nan, np.nan)
     for kind in transforms:
         x_mv = _transform(rng, kind, x_mv, size, fs_hz)
+        if kind == "clipping":
+            low_mv, high_mv = apply_quantisation(
+                np.array([np.nanmin(x_mv), np.nanmax(x_mv)]), step_mv=step_mv
+            )
+            rails_mv = (float(low_mv), float(high_mv))
     alone: tuple[tuple[str, Array], ...] = ()
     if len(kinds) > 1:
         alone = tuple(
@@ -135,6 +155,7 @@ def spoil_row(
         kinds=kinds,
         snr_db=snr_db if additive else np.nan,
         alone=alone,
+        rails_mv=rails_mv,
     )
 
 
@@ -174,23 +195,36 @@ def spoil_strip(
 
 
 def fault_truth(
-    kinds: list[tuple[str, ...]], harmed: list[dict[str, bool]]
+    kinds: list[tuple[str, ...]], felt: list[dict[str, bool]]
 ) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
     """Truth and "is asked" of the learned faults, (n, 4) each.
 
-    ``harmed[r]`` says of each additive kind on row r whether it alone broke a measurement. A fault
-    that lies there but harms nothing is none; recorded noise is silent about the other faults.
+    ``felt[r]`` says of each additive kind on row r whether it alone was felt by a measurement. A fault
+    that was not laid on is not there; beside kinds of unclear content nothing is asked.
     """
     truth = np.zeros((len(kinds), len(LEARNED_FAULTS)), dtype=bool)
     asked = np.ones_like(truth)
-    for r, (on_row, harm) in enumerate(zip(kinds, harmed, strict=True)):
+    for r, (on_row, was_felt) in enumerate(zip(kinds, felt, strict=True)):
         if any(kind in UNCLEAR for kind in on_row):
             asked[r] = False
-        for kind, broke in harm.items():
+        for kind, hit in was_felt.items():
             column = LEARNED_FAULTS.index(FAULT_OF[kind])
-            truth[r, column] |= broke
+            truth[r, column] |= hit
             asked[r, column] = True
     return truth, asked
+
+
+def harm_truth(taken: list[dict[str, NDArray[np.int8]]]) -> NDArray[np.int8]:
+    """(n, H, 5) over HARM_FAULTS: 1 this fault alone took the measurement, 0 it did not, -1 not asked.
+
+    ``taken[r]`` gives (5,) such answers for each fault that lies on row r by itself somewhere.
+    """
+    out = np.full((len(taken), len(HARM_FAULTS), len(MEASUREMENTS)), -1, dtype=np.int8)
+    for r, by_fault in enumerate(taken):
+        for fault, answers in by_fault.items():
+            column = out[r, HARM_FAULTS.index(fault)]
+            np.maximum(column, answers, out=column)
+    return out
 
 
 def _transform(rng: np.random.Generator, kind: str, x_mv: Array, qrs_mv: float, fs_hz: float) -> Array:

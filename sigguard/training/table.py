@@ -52,6 +52,7 @@ class Rows:
     error: NDArray[np.float64]
     fault: NDArray[np.bool_]  # (n, 4)
     fault_asked: NDArray[np.bool_]  # (n, 4)
+    harm: NDArray[np.int8]  # (n, H, 5): which measurement each fault takes by itself, as in spoil.harm_truth
     carrier: NDArray[np.int32]  # (n,)
     group: NDArray[np.int8]  # (n,): index into GROUPS
     real: NDArray[np.bool_]  # (n,): the carrier is a real recording

@@ -23,8 +23,8 @@ class FakeAnalysis:
     features: NDArray[np.float32]
 
 
-def analyse(x_mv: NDArray[np.float64], fs_hz: float) -> FakeAnalysis:
-    """Beats are tall peaks; intervals and ST are numbers that move with what lies on the row."""
+def analyse(x_mv: NDArray[np.float64], fs_hz: float, **header: NDArray[np.float64]) -> FakeAnalysis:
+    """Whatever the header tells. Beats are tall peaks; intervals and ST are numbers that move with what lies on the row."""
     missing = np.isnan(x_mv)
     x = np.where(missing, 0.0, x_mv)
     slow = uniform_filter1d(x, int(0.6 * fs_hz), axis=1)

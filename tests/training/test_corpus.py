@@ -6,12 +6,20 @@ import numpy as np
 import pytest
 
 from sigguard.errors import UsageError
-from sigguard.reliability import LEARNED_FAULTS
+from sigguard.reliability import HARM_FAULTS, LEARNED_FAULTS
 from sigguard.simulate.recipes import training_recipe
 from sigguard.simulate.recorded import PARTS, noise_power_mv2
 from sigguard.training.carriers import real_subjects, simulated_carrier
 from sigguard.training.corpus import SIZES, Shape, Size, build_corpus, plan_chunks
-from sigguard.training.spoil import FAULT_OF, NoiseSource, draw_kinds, fault_truth, spoil_row, spoil_strip
+from sigguard.training.spoil import (
+    FAULT_OF,
+    NoiseSource,
+    draw_kinds,
+    fault_truth,
+    harm_truth,
+    spoil_row,
+    spoil_strip,
+)
 from sigguard.training.table import GROUPS
 from training.fake import FAKE
 
@@ -137,7 +145,7 @@ def test_recorded_kinds_need_a_folder() -> None:
         SOURCE.noise(rng, "recorded-em", n_samples=100, fs_hz=250.0)
 
 
-def test_fault_truth_is_harm_alone_and_recorded_noise_is_silent_about_the_rest() -> None:
+def test_fault_truth_is_what_was_laid_on_and_felt() -> None:
     kinds = [("muscle",), ("muscle",), ("recorded-em", "mains"), (), ("lead-off",)]
     harmed = [{"muscle": True}, {"muscle": False}, {"recorded-em": True, "mains": False}, {}, {}]
     truth, asked = fault_truth(kinds, harmed)
@@ -145,9 +153,26 @@ def test_fault_truth_is_harm_alone_and_recorded_noise_is_silent_about_the_rest()
     assert truth[0].tolist() == [name == "muscle" for name in LEARNED_FAULTS]
     assert not truth[1].any() and asked[[0, 1, 3]].all()
     assert truth[2, at["motion"]] and not truth[2, at["mains"]]
-    assert asked[2].tolist() == [name in ("motion", "mains") for name in LEARNED_FAULTS]
+    # What recorded movement holds beside itself is not to be named for it.
+    assert asked[2].all() and truth[2].sum() == 1
     assert not asked[4].any()
     assert set(FAULT_OF.values()) == set(LEARNED_FAULTS)
+
+
+def test_harm_truth_speaks_only_of_what_lies_there() -> None:
+    some, none = np.array([1, 0, 0, -1, 1], np.int8), np.array([0, 0, 1, -1, 0], np.int8)
+    out = harm_truth([{"muscle": some}, {"muscle": none, "flat": some}, {}])
+    assert out.shape == (3, len(HARM_FAULTS), 5)
+    np.testing.assert_array_equal(out[0, HARM_FAULTS.index("muscle")], some)
+    np.testing.assert_array_equal(out[1, HARM_FAULTS.index("flat")], some)
+    assert (out[2] == -1).all() and (out[0] >= 0).sum() == 4
+
+
+def test_the_truth_of_harm_agrees_with_the_truth_of_faults(corpus) -> None:
+    rows = corpus.rows
+    taken = (rows.harm[:, : len(LEARNED_FAULTS)] == 1).any(axis=2)
+    assert taken.any() and not (taken & ~rows.fault).any()  # what takes a measurement was felt
+    assert (rows.harm[rows.group == GROUPS.index("none")] == -1).all()
 
 
 def test_real_subjects_are_split_once(tmp_path) -> None:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -13,7 +15,7 @@ from sigguard.training.calibrate import CalibrationSettings
 from sigguard.training.corpus import Shape, Size, build_corpus, plan_chunks
 from sigguard.training.evaluate import evaluate_rows
 from sigguard.training.fit import SMALL, Task, fit_all
-from sigguard.training.run import fault_thresholds, lead_tasks, learn
+from sigguard.training.run import fault_thresholds, harm_tasks, lead_tasks, learn
 from sigguard.trees import TreeEnsemble
 from training.fake import FAKE
 
@@ -89,6 +91,27 @@ def test_tasks_know_which_features_harm() -> None:
     rows = build_corpus(recipe, FAKE, plan_chunks(recipe, size, seed=1)).rows
     tasks = lead_tasks(rows, ("muscle_rms_uv", "rate", "missing_s"))
     assert [t.monotone for t in tasks] == [(-1, 0, -1)] * 5 + [None] * 4
+
+
+def test_harm_is_asked_of_what_lies_on_a_row_alone() -> None:
+    size = Size(rows=(2, 1, 1), strips=(0, 0, 0), cells=0, shapes=3 * (Shape(3, 2, 6),))
+    recipe = training_recipe()
+    rows = build_corpus(recipe, FAKE, plan_chunks(recipe, size, seed=2)).rows
+    table, tasks = harm_tasks(rows)
+    assert table.shape[1] == len(FAKE.feature_names) + 1 and [t.name for t in tasks][1] == "harm pr"
+    laid = (rows.harm >= 0).any(axis=2)
+    assert len(table) == laid.sum() > 0
+    np.testing.assert_array_equal(table[:, -1], np.nonzero(laid)[1])
+    assert all((t.answer <= t.asked).all() for t in tasks) and any(t.answer.any() for t in tasks)
+
+
+def test_the_model_tells_what_a_fault_takes(trained) -> None:
+    model = ReliabilityModel.load(trained.model_path)
+    features = np.zeros((3, len(FAKE.feature_names)), np.float32)
+    p = model.harm(features, np.array([0, 1, 6]))
+    assert p.shape == (3, 5) and ((p > 0) & (p < 1)).all()
+    untaught = replace(model, harm_trees=None)
+    assert (untaught.harm(features, np.array([0, 1, 6])) == 0.5).all()
 
 
 def test_fault_threshold_is_the_lowest_that_is_right_four_times_in_five() -> None:
