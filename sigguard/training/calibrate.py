@@ -6,10 +6,10 @@ at a score is taken from the window of rows about it: the order statistic that l
 chapter 7, from memory). Neighbours that break the order "a better score, a smaller bound" are pooled
 (pool adjacent violators; Barlow et al. 1972, from memory).
 
-The promise must hold for each kind of noise and not only for their mixture. So the table learned from all
-rows is then asked to each kind: its scores are taken for worse, by one step on the logit scale after
-another, until the rows of the kind keep to their bounds, all together and in each third by score. The kind
-that needs most decides. That a wave is named absent is asked for 90 % at any score and 95 % over all so named.
+What is learned from all kinds of noise together may be off for one of them. So the table is then asked to each
+kind: its scores are taken for worse, by one step on the logit scale after another, until the rows of each kind
+keep to their bounds in at least 93 %, two points below the promise that holds over all. That a wave is named
+absent is asked for 90 % at any score and 95 % over all so named.
 """
 
 from __future__ import annotations
@@ -30,7 +30,8 @@ Statistic = Callable[[Array], float]
 _FINENESS = 12  # pieces to a window
 _LEAST = 1e-9
 _SHIFTS = np.arange(0.0, 6.01, 0.05)  # steps by which a score may be taken for worse, on the logit scale
-_ENOUGH, _THIRD, _FEW = 150, 100, 30  # rows that can prove 95 %, that make a third, too few to speak below
+EACH_KIND = 0.93  # of the bounds of one kind of noise
+_FEW = 30  # rows of one kind, too few to speak below
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,10 +118,9 @@ def fit_bound(
     def kept(candidate: StepTable, rows: NDArray[np.bool_]) -> NDArray[np.bool_]:
         bound = candidate(score[rows])
         stated = np.isfinite(bound)
-        order = np.argsort(score[rows][stated], kind="stable")
-        return (error[rows] <= bound)[stated][order]
+        return (error[rows] <= bound)[stated]
 
-    return _safe_for_each(table, groups, kept, settings)
+    return _safe_for_each(table, groups, kept, settings, least=EACH_KIND)
 
 
 def fit_share(
@@ -149,10 +149,9 @@ def fit_share(
 
     def kept(candidate: StepTable, rows: NDArray[np.bool_]) -> NDArray[np.bool_]:
         called = candidate(score[rows]) >= asked
-        order = np.argsort(score[rows][called], kind="stable")
-        return right[rows][called][order]
+        return right[rows][called]
 
-    return _safe_for_each(table, groups, kept, settings)
+    return _safe_for_each(table, groups, kept, settings, least=PROMISE)
 
 
 def calibrate(
@@ -183,30 +182,21 @@ def _safe_for_each(
     groups: NDArray[np.bool_],
     kept: Callable[[StepTable, NDArray[np.bool_]], NDArray[np.bool_]],
     settings: CalibrationSettings,
+    *,
+    least: float,
 ) -> StepTable:
-    """The table moved by as many steps as the kind that needs most; ``kept`` gives its rows, by rising score."""
+    """The table moved by as many steps as the kind that needs most; ``kept`` says which of its rows held."""
     for steps in _SHIFTS:
         candidate = shifted(table, steps) if steps else table
         asked = [rows for rows in groups if rows.sum() >= settings.min_group]
-        if all(_keeps_promise(kept(candidate, rows), settings.confidence) for rows in asked):
+        if all(_keeps_promise(kept(candidate, rows), least) for rows in asked):
             return candidate
     return StepTable(edge=np.zeros(0), level=np.zeros(0), below=table.below)
 
 
-def _keeps_promise(kept: NDArray[np.bool_], confidence: float) -> bool:
-    """Whether (n,) rows of one kind, ordered by score, keep to it: all together, and in each third.
-
-    Together the lower limit of their share must reach 95 %. A third, or few rows, cannot prove so
-    much; there the share itself must. A handful says nothing.
-    """
-    n = len(kept)
-    if n < _FEW:
-        return True
-    share = (
-        lower_share(kept.astype(np.float64), confidence=confidence) if n >= _ENOUGH else float(np.mean(kept))
-    )
-    parts = np.array_split(kept, 3) if n >= 3 * _THIRD else []
-    return share >= PROMISE and all(np.mean(part) >= PROMISE for part in parts)
+def _keeps_promise(kept: NDArray[np.bool_], least: float) -> bool:
+    """Whether (n,) rows of one kind keep to it often enough; a handful says nothing."""
+    return len(kept) < _FEW or float(np.mean(kept)) >= least
 
 
 def _pieces(score: Array, window: int) -> list[tuple[int, int, int]]:

@@ -49,8 +49,8 @@ class Size:
 
 SIZES = {
     "full": Size(
-        rows=(90, 80, 24),
-        strips=(50, 70, 16),
+        rows=(130, 110, 24),
+        strips=(60, 80, 16),
         cells=30,
         shapes=(Shape(10, 4, 8), Shape(32, 2, 5), Shape(16, 4, 5)),
     ),

@@ -48,7 +48,7 @@ def test_every_chunk_has_a_seed_of_its_own() -> None:
     assert {c.fs_hz for c in chunks} == {rate for rate, _ in RECIPE.fs_hz}
     assert all(5 <= c.duration_s <= 30 for c in chunks)
     analysed = sum(c.n_carriers * c.n_leads * c.n_draws for c in chunks if c.kind != "strips")
-    assert 40_000 <= analysed <= 70_000
+    assert 60_000 <= analysed <= 100_000
 
 
 def test_same_seed_same_corpus_and_another_seed_another(corpus) -> None:
