@@ -27,6 +27,7 @@ from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
 from sigguard.reliability import LEARNED_FAULTS, ReliabilityModel
 from sigguard.report.document import Report
+from sigguard.rescoring import Setting, won_back
 from sigguard.rhythm_shape import grid_samples
 from sigguard.segment_pass import Part, Progress, Source, joined_tables, measure_all, merge_beats
 from sigguard.segments import ABSENT, FAULTS, MEASUREMENTS, UNITS, Segments
@@ -165,6 +166,17 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
     summaries = lead_summaries(segments)
     electrodes = _electrodes(parts, info)
     judgement = judge(profile, segments, values, st_by_lead, alarms, summaries=summaries)
+    over_leads = _beats_over_leads(parts, beats, info)
+    acts = won_back(
+        source,
+        plan,
+        segments,
+        Setting(model, profile, options.mains_among_hz),
+        lead_beats=beats,
+        beats=over_leads,
+        common=parts[0].common_beats is not None,
+        alarms=alarms,
+    )
     return Report(
         software_version=__version__,
         model_sha256=model.sha256 or None,
@@ -178,10 +190,10 @@ def screen(source: Source, options: Options, *, progress: Progress | None = None
         segments=segments,
         electrodes=tuple(electrodes),
         patient_first=tuple(alarms),
-        advice=tuple(advise(segments, summaries, electrodes=electrodes, patient_first=alarms)),
+        advice=tuple(advise(segments, acts, patient_first=alarms)),
         spans=spans(segments, info.duration_s),
         best_strip=best_strip(segments, info.leads, every=profile.name == "resting"),
-        beats=_beats_over_leads(parts, beats, info),
+        beats=over_leads,
         lead_beats=dict(zip(info.leads, beats, strict=True)),
         procedure_note=PROCEDURE_NOTE,
     )

@@ -126,8 +126,48 @@ def _table(
     profile: Profile,
     agree: NDArray[np.bool_] | None,
 ) -> Segments:
-    tolerance = tolerances(profile)
-    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerance, agree)
+    found = decide(info, lead_index, analysis, model, profile, agree)
+    which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
+    return Segments(
+        leads=info.leads,
+        feature_names=FEATURE_NAMES,
+        lead_index=lead_index.astype(np.int32),
+        start_s=plan.start[which] / info.fs_hz,
+        end_s=plan.stop[which] / info.fs_hz,
+        value=found.value,
+        score=found.score,
+        bound=found.bound,
+        reliable=found.reliable,
+        absent=found.absent,
+        grade=grade_rows(found.reliable, found.absent),
+        fault=fault_rows(model, analysis.features, found.fault_p, found.limited, batch.size / info.fs_hz),
+        features=analysis.features,
+    )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Decision:
+    """What is decided of (R,) rows, before any alarm is looked for."""
+
+    value: NDArray[np.float64]
+    score: NDArray[np.float64]
+    bound: NDArray[np.float64]
+    reliable: NDArray[np.bool_]
+    absent: NDArray[np.int8]
+    fault_p: NDArray[np.float64]
+    limited: NDArray[np.bool_]
+
+
+def decide(
+    info: RecordingInfo,
+    lead_index: NDArray[np.intp],
+    analysis: Analysis,
+    model: ReliabilityModel,
+    profile: Profile,
+    agree: NDArray[np.bool_] | None,
+) -> Decision:
+    """What of each row's measurements can be trusted or is absent; rows run by time and then lead."""
+    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerances(profile), agree)
     reliable, limited = limit_by_recording(reliable, lead_index, info.fs_hz, info.band_hz)
     hidden = hardly_there(analysis.features, reliable)
     named = absent
@@ -136,22 +176,7 @@ def _table(
     absent = np.where(hidden & (absent == NO_WAVE), named, absent).astype(np.int8)
     value = np.where(absent > 0, np.nan, analysis.value)
     bound = np.where(absent > 0, np.nan, bound)
-    which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
-    return Segments(
-        leads=info.leads,
-        feature_names=FEATURE_NAMES,
-        lead_index=lead_index.astype(np.int32),
-        start_s=plan.start[which] / info.fs_hz,
-        end_s=plan.stop[which] / info.fs_hz,
-        value=value,
-        score=score,
-        bound=bound,
-        reliable=reliable,
-        absent=absent,
-        grade=grade_rows(reliable, absent),
-        fault=fault_rows(model, analysis.features, fault_p, limited, batch.size / info.fs_hz),
-        features=analysis.features,
-    )
+    return Decision(value, score, bound, reliable, absent, fault_p, limited)
 
 
 def tolerances(profile: Profile) -> NDArray[np.float64]:
