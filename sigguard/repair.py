@@ -165,7 +165,7 @@ def hum_part(x_mv: Floats, fs_hz: float, mains_hz: float, open_mask: NDArray[np.
     """The mains line and its harmonics in (L, N) mV, each a sine fitted by least squares in a window of 0.5 s that
     slides, so that hum that swells is followed; fitted outside the QRS complexes, which hold 50 Hz of their own."""
     n = x_mv.shape[1]
-    (high,) = _banded(x_mv, fs_hz, lambda f: 1.0 - _below(f, 0.7 * mains_hz))
+    (high,) = _banded(x_mv, fs_hz, lambda f: 1.0 - _below(f, 0.5 * mains_hz))
     weight = open_mask.astype(np.float64)
     under = np.maximum(_sliding(weight[None], round(HUM_WINDOW_S * fs_hz))[0], 1.0)
     out = np.zeros_like(high)

@@ -43,6 +43,7 @@ from sigguard.verdicts import same_beats
 Floats = NDArray[np.float64]
 
 MOST_ROUNDS = 4
+TRIES = (5, 2)  # acts scored again in the first round, and in each after it
 WORTH_IT = 0.01  # share of all measurement-seconds below which an act is not worth a word
 TOUCHED_MV = 0.002  # a lead from which an act takes less is left as it is
 MOST_ROWS = 48  # of 12 leads scored again in all
@@ -93,12 +94,12 @@ def won_back(
     budget = _Budget(MOST_ROWS * max(1, len(strips) * source.info.n_leads // 12))
     out: list[WonBack] = []
     done: set[Act] = set()
-    for _ in range(MOST_ROUNDS):
+    for number in range(MOST_ROUNDS):
         remaining_s = sum(s.weight * float(s.lost.sum()) * s.size for s in strips) / source.info.fs_hz
         if remaining_s <= WORTH_IT * whole_s:
             break
         left = [c for c in [*by_measure(strips), *places] if c not in done]
-        scored = _round(source, strips, left, setting, usual, remaining_s, budget)
+        scored = _round(source, strips, left, setting, usual, remaining_s, budget, tries=TRIES[number > 0])
         gains = {c: _gain_s(strips, after, source.info.fs_hz) for c, after in scored.items()}
         if not gains:
             break
@@ -130,12 +131,14 @@ def _round(
     usual: Floats,
     remaining_s: float,
     budget: _Budget,
+    *,
+    tries: int,
 ) -> dict[Act, list[Floats]]:
     """What is still lost after each act tried: those that take most away first, until one wins most of it back."""
     share = {c: share_taken(strips, c) for c in left if c[0] not in COMPARED}
     order = sorted(share, key=lambda c: -share[c] * (1.25 if c[0] in LOCAL else 1.0))
     scored = {c: [_compared(s, c, setting, usual) for s in strips] for c in left if c[0] in COMPARED}
-    for k, c in enumerate(order):
+    for k, c in enumerate(order[:tries]):
         if share[c] < LEAST_SHARE or budget.rows <= 0:
             break
         scored[c] = _score_again(source, strips, c, setting, budget)
