@@ -26,7 +26,8 @@ TREMOR_RATIO = (2.0, 4.0)  # middle over 0.7 to 3 Hz, rms: movement has about 1,
 # Fast and tremor over slow, rms. Recorded muscle artifact has 0.4 and more: the shaking that goes with it moves the
 # electrodes too, and ends with it. Recorded wander and electrode motion have 0.06: what is fast in them goes with them.
 SHAKING_RATIO, STILL_RATIO = (0.15, 0.3), (0.08, 0.12)
-HUM_WINDOW_S = 0.5
+# each pass takes what the one before left of a line some tenths of a hertz off, or swelling
+HUM_WINDOWS_S = (0.5, 0.5, 0.25)
 HARMONICS = 5
 BEFORE, AFTER = 0.42, 0.58  # shares of the interval that belong to the beat after and the beat before
 QRS_S = (0.06, 0.08)
@@ -162,22 +163,20 @@ def _banded(x: Floats, fs_hz: float, *gains: Callable[[Floats], Floats]) -> list
 
 
 def hum_part(x_mv: Floats, fs_hz: float, mains_hz: float, open_mask: NDArray[np.bool_]) -> Floats:
-    """The mains line and its harmonics in (L, N) mV, each a sine fitted by least squares in a window of 0.5 s that
+    """The mains line and its harmonics in (L, N) mV, each a sine fitted by least squares in a window of half a second that
     slides, so that hum that swells is followed; fitted outside the QRS complexes, which hold 50 Hz of their own."""
     n = x_mv.shape[1]
     (high,) = _banded(x_mv, fs_hz, lambda f: 1.0 - _below(f, 0.5 * mains_hz))
     weight = open_mask.astype(np.float64)
-    under = np.maximum(_sliding(weight[None], round(HUM_WINDOW_S * fs_hz))[0], 1.0)
     out = np.zeros_like(high)
     t_s = np.arange(n) / fs_hz
     for k in range(1, HARMONICS + 1):
         if k * mains_hz > 0.45 * fs_hz:
             break
         turn = np.exp(-2j * np.pi * k * mains_hz * t_s)
-        for _ in range(
-            2
-        ):  # the line may be some tenths of a hertz off: the second pass takes what the first left
-            part = _sliding((high - out) * (weight * turn), round(HUM_WINDOW_S * fs_hz)) / under
+        for width in (round(window_s * fs_hz) for window_s in HUM_WINDOWS_S):
+            under = np.maximum(_sliding(weight[None], width)[0], 1.0)
+            part = _sliding((high - out) * (weight * turn), width) / under
             out += 2.0 * (part * turn.conj()).real
     return out
 
