@@ -19,7 +19,8 @@ from sigguard.segments import MEASUREMENTS, Segments
 from sigguard.spans import lost
 
 MAX_ADVICE = 5
-NOT_WORTH_IT = 0.01  # share of all measurement-seconds below which nothing needs doing
+NOT_WORTH_IT = 0.01  # share of all measurement-seconds below which an act is not given
+LITTLE_LOST = 0.035  # ... and below which nothing needs doing: two measurements of one of twelve leads
 SURE_ENOUGH = 0.5  # probability from which on a placement is worth a look
 _LIMB_WORDS = {"RA": "right arm (RA)", "LA": "left arm (LA)", "LL": "left leg (LL)"}
 
@@ -34,7 +35,7 @@ def advise(
 ) -> tuple[Advice, ...]:
     """At most five pieces of advice: the patient, the placement, then ``acts`` in the order given.
 
-    Where at least 99 % of all measurement-seconds are reliable (or absent) and nothing else was found,
+    Where at least 96.5 % of all measurement-seconds are reliable (or absent) and nothing else was found,
     the one advice is that nothing needs doing; where more is lost and no act wins it back, to record once
     more. An empty table without findings gives none at all.
     """
@@ -63,7 +64,7 @@ def seconds_lost(
 
 
 def _nothing_wins(lost_s: float, whole_s: float) -> Advice:
-    if lost_s <= NOT_WORTH_IT * whole_s:
+    if lost_s <= LITTLE_LOST * whole_s:
         kept = (f"{100 * (1 - lost_s / whole_s):.0f} % of all that could be measured can be trusted",)
         return Advice(0, "nothing", None, "Nothing needs doing.", kept if whole_s > 0 else ())
     because = (

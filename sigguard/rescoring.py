@@ -28,7 +28,7 @@ from sigguard.acts import (
     share_taken,
     stands_out,
 )
-from sigguard.advice import seconds_lost
+from sigguard.advice import LITTLE_LOST, seconds_lost
 from sigguard.blocks import SegmentPlan
 from sigguard.findings import PatientFirst, WonBack
 from sigguard.measure import analyse
@@ -78,10 +78,10 @@ def won_back(
     """The acts that win measurement-seconds back, in the order in which they are best done.
 
     ``lead_beats`` and ``beats`` (over all leads) are sample indices in the recording; ``common`` says that the
-    latter were looked for in all leads together. Empty where nothing is lost, or no act wins a hundredth.
+    latter were looked for in all leads together. Empty where little is lost, or no act wins a hundredth.
     """
     lost_s, whole_s = seconds_lost(segments, alarms)
-    if lost_s.sum() <= WORTH_IT * whole_s:
+    if lost_s.sum() <= LITTLE_LOST * whole_s:
         return ()
     by_slot = lost_s.reshape(len(plan), -1).sum(axis=1)
     chosen, n_spoilt = choose_slots(by_slot), int((by_slot > 0).sum())
