@@ -129,6 +129,18 @@ class Advice:
     target: str | None
     text: str
     because: tuple[str, ...] = ()
+    gain_s: float | None = None  # measurement-seconds it would win back, where that was measured
+
+
+@dataclass(frozen=True, slots=True)
+class WonBack:
+    """What one act at one place would win back, as measured."""
+
+    action: str
+    target: str | None
+    gain_s: float  # measurement-seconds
+    leads: tuple[str, ...]  # those that gain
+    because: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

@@ -29,6 +29,7 @@ from sigguard.readers import open_recording
 from sigguard.recording import Recording, RecordingInfo
 from sigguard.reliability import LEARNED_FAULTS
 from sigguard.report.document import Report
+from sigguard.rescoring import Setting, won_back
 from sigguard.rhythm_gaps import Contact, contact
 from sigguard.rhythm_shape import grid_samples
 from sigguard.segment_pass import Part, Progress, Source, measure_all, shipped_model
@@ -176,6 +177,17 @@ def screen(
     laws = usual_breaks(collected.laws)
     misplaced = _placement(collected.strips, segments, alarms)
     judgement = judge(profile, segments, values, st_by_lead, alarms, summaries=summaries)
+    over_leads = collected.beats()
+    acts = won_back(
+        source,
+        plan,
+        segments,
+        Setting(model, profile, options.mains_among_hz),
+        lead_beats=beats,
+        beats=over_leads,
+        common=bool(collected.strips),
+        alarms=alarms,
+    )
     return Report(
         software_version=__version__,
         model_sha256=model.sha256 or None,
@@ -192,12 +204,10 @@ def screen(
         electrode_powers=powers,
         placement=(*misplaced, *law_findings(laws)),
         patient_first=tuple(alarms),
-        advice=tuple(
-            advise(segments, summaries, electrodes=electrodes, patient_first=alarms, placement=misplaced)
-        ),
+        advice=tuple(advise(segments, acts, patient_first=alarms, placement=misplaced)),
         spans=spans(segments, info.duration_s),
         best_strip=best_strip(segments, info.leads, every=profile.name == "resting"),
-        beats=collected.beats(),
+        beats=over_leads,
         lead_beats=dict(zip(info.leads, beats, strict=True)),
         procedure_note=PROCEDURE_NOTE,
         notes=scale_notes(laws),

@@ -197,24 +197,15 @@ def _table(
     profile: Profile,
     agree: NDArray[np.bool_] | None,
 ) -> Segments:
-    tolerance = tolerances(profile)
-    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerance, agree)
-    reliable, limited = limit_by_recording(reliable, lead_index, info.fs_hz, info.band_hz)
-    hidden = hardly_there(analysis.features, reliable)
-    named = absent
-    absent = small_here(np.where(hidden, NO_WAVE, named), reliable, analysis.value, info.n_leads)
-    # What is small here without being seen elsewhere is not called absent: it was merely not trusted.
-    absent = np.where(hidden & (absent == NO_WAVE), named, absent).astype(np.int8)
-    value = np.where(absent > 0, np.nan, analysis.value)
-    bound = np.where(absent > 0, np.nan, bound)
+    found = decide(info, lead_index, analysis, model, profile, agree)
     fault, details = judge_faults(
         model,
         analysis,
         core_mv,
         info.fs_hz,
-        fault_p=fault_p,
-        lost=~reliable & (absent == 0),
-        limited=limited,
+        fault_p=found.fault_p,
+        lost=~found.reliable & (found.absent == 0),
+        limited=found.limited,
         n_leads=info.n_leads,
     )
     which = batch.first + np.repeat(np.arange(batch.count), info.n_leads)
@@ -224,16 +215,50 @@ def _table(
         lead_index=lead_index.astype(np.int32),
         start_s=plan.start[which] / info.fs_hz,
         end_s=plan.stop[which] / info.fs_hz,
-        value=value,
-        score=score,
-        bound=bound,
-        reliable=reliable,
-        absent=absent,
-        grade=grade_rows(reliable, absent),
+        value=found.value,
+        score=found.score,
+        bound=found.bound,
+        reliable=found.reliable,
+        absent=found.absent,
+        grade=grade_rows(found.reliable, found.absent),
         fault=fault,
         features=analysis.features,
         details=details,
     )
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Decision:
+    """What is decided of (R,) rows, before any alarm is looked for."""
+
+    value: NDArray[np.float64]
+    score: NDArray[np.float64]
+    bound: NDArray[np.float64]
+    reliable: NDArray[np.bool_]
+    absent: NDArray[np.int8]
+    fault_p: NDArray[np.float64]
+    limited: NDArray[np.bool_]
+
+
+def decide(
+    info: RecordingInfo,
+    lead_index: NDArray[np.intp],
+    analysis: Analysis,
+    model: ReliabilityModel,
+    profile: Profile,
+    agree: NDArray[np.bool_] | None,
+) -> Decision:
+    """What of each row's measurements can be trusted or is absent; rows run by time and then lead."""
+    score, bound, reliable, absent, fault_p = judge_rows(model, analysis, tolerances(profile), agree)
+    reliable, limited = limit_by_recording(reliable, lead_index, info.fs_hz, info.band_hz)
+    hidden = hardly_there(analysis.features, reliable)
+    named = absent
+    absent = small_here(np.where(hidden, NO_WAVE, named), reliable, analysis.value, info.n_leads)
+    # What is small here without being seen elsewhere is not called absent: it was merely not trusted.
+    absent = np.where(hidden & (absent == NO_WAVE), named, absent).astype(np.int8)
+    value = np.where(absent > 0, np.nan, analysis.value)
+    bound = np.where(absent > 0, np.nan, bound)
+    return Decision(value, score, bound, reliable, absent, fault_p, limited)
 
 
 def tolerances(profile: Profile) -> NDArray[np.float64]:

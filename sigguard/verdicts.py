@@ -65,8 +65,15 @@ def agreeing_leads(
     for row in range(n_rows):
         own = analysis.beat_s[analysis.beat_row == row]
         common = common_s[common_strip == row // n_leads]
-        out[row] = len(own) > 1 and _all_near(own, common, duration_s) and _all_near(common, own, duration_s)
+        out[row] = same_beats(own, common, duration_s)
     return out.reshape(-1, n_leads)
+
+
+def same_beats(own_s: NDArray[np.float64], common_s: NDArray[np.float64], duration_s: float) -> bool:
+    """Whether two sorted lists hold the same beats, each within 150 ms, edges aside; no for fewer than two."""
+    return (
+        len(own_s) > 1 and _all_near(own_s, common_s, duration_s) and _all_near(common_s, own_s, duration_s)
+    )
 
 
 def _all_near(some_s: NDArray[np.float64], others_s: NDArray[np.float64], duration_s: float) -> bool:

@@ -25,7 +25,9 @@ FLOOR = {
     **dict.fromkeys(("errors", "recording", "segments", "findings", "profile", "resources"), WORDS),
     **dict.fromkeys(("readers", "writers", "report"), EDGES),
     **dict.fromkeys(("screening", "segment_pass", "collecting", "stored", "workers", "trim"), JOINERS),
-    **dict.fromkeys(("compare", "live", "inbox", "simulate", "training"), JOINERS),
+    **dict.fromkeys(
+        ("rescoring", "acts", "spoilt_strips", "compare", "live", "inbox", "simulate", "training"), JOINERS
+    ),
     "cli": CLI,
 }
 TOP_LEVEL = {"README.md", "DEVELOPERS.md", "pyproject.toml", "sigguard", "models", "tests", "synthetic"}

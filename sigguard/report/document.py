@@ -139,6 +139,7 @@ class Report:
                     "target": None if a.target is None else clean(a.target),
                     "text": clean(a.text),
                     "because": _texts(a.because),
+                    "gain_s": None if a.gain_s is None else number(a.gain_s, 1),
                 }
                 for a in self.advice
             ],
