@@ -83,24 +83,39 @@ def run(paths: Sequence[Path], out_dir: Path, settings: Settings, *, jobs: int, 
     outcomes = _in_turn if min(jobs, len(work)) < 2 else _at_once
     with _progress(len(work)) as advance:
         try:
-            for outcome in outcomes(work, out_dir, settings, as_json, min(jobs, len(work)), result):
+            if len(work) == 1:  # the processes then share out the one recording
+                found = iter([check_one(*work[0], out_dir, settings, as_json, jobs=jobs, progress=advance)])
+            else:
+                found = outcomes(work, out_dir, settings, as_json, min(jobs, len(work)), result)
+            for n_done, outcome in enumerate(found, 1):
                 result.outcomes.append(outcome)
                 _tell(outcome)
-                advance()
+                advance(n_done / len(work))
         except KeyboardInterrupt:
             result.interrupted = True
     _close(result, out_dir)
     return result
 
 
-def check_one(path: Path, name: str, out_dir: Path, settings: Settings, as_json: bool) -> Outcome:
+def check_one(
+    path: Path,
+    name: str,
+    out_dir: Path,
+    settings: Settings,
+    as_json: bool,
+    *,
+    jobs: int = 1,
+    progress: Callable[[float], None] | None = None,
+) -> Outcome:
     """Check one recording and write its report; whatever goes wrong with it becomes one sentence."""
     try:
         from sigguard.report.text import one_line
         from sigguard.report.worklist import row_of
         from sigguard.screening import screen_path
 
-        report = screen_path(path, out_dir=out_dir, name=name, **asdict(settings))
+        report = screen_path(
+            path, out_dir=out_dir, name=name, jobs=jobs, progress=progress, **asdict(settings)
+        )
         line = (
             json.dumps(report.to_dict(), ensure_ascii=False, allow_nan=False) if as_json else one_line(report)
         )
@@ -244,23 +259,35 @@ def _close(result: Result, out_dir: Path) -> None:
 
 
 @contextmanager
-def _progress(n: int) -> Iterator[Callable[[], None]]:
-    """A bar on stderr if that is a terminal and there is more than one recording."""
-    if n < 2 or not sys.stderr.isatty():
-        yield lambda: None
+def _progress(n: int) -> Iterator[Callable[[float], None]]:
+    """A bar on stderr if that is a terminal; it shows only once there is something to wait for.
+
+    What it yields takes the share done, from 0 to 1.
+    """
+    if not sys.stderr.isatty():
+        yield lambda share: None
         return
     from rich.console import Console
-    from rich.progress import BarColumn, MofNCompleteColumn, Progress, TimeRemainingColumn
+    from rich.progress import BarColumn, Progress, TaskProgressColumn, TextColumn, TimeRemainingColumn
 
     # Lines for stdout pass above the bar only where both are the terminal; a pipe is left alone.
     bar = Progress(
+        TextColumn("{task.description}"),
         BarColumn(),
-        MofNCompleteColumn(),
+        TaskProgressColumn(),
         TimeRemainingColumn(),
         console=Console(stderr=True),
         transient=True,
         redirect_stdout=sys.stdout.isatty(),
     )
     with bar:
-        task = bar.add_task("", total=n)
-        yield lambda: bar.advance(task)
+        task = bar.add_task(f"0/{n}" if n > 1 else "checking", total=1.0, visible=n > 1)
+
+        def advance(share: float) -> None:
+            # One short recording is done at its first report: no bar flashes up for it.
+            if n > 1:
+                bar.update(task, completed=share, description=f"{round(share * n)}/{n}")
+            else:
+                bar.update(task, completed=share, visible=share < 1.0)
+
+        yield advance

@@ -27,7 +27,12 @@ def check(
     ] = None,
     segment: Annotated[float, typer.Option(help="Length of a segment, 5 to 30.", metavar="SECONDS")] = 10.0,
     mains: Annotated[Mains, typer.Option(help="Mains frequency; auto finds out.")] = Mains.AUTO,
-    jobs: Annotated[int, typer.Option(help="Recordings checked at once.", metavar="N")] = 1,
+    jobs: Annotated[
+        int,
+        typer.Option(
+            help="Processes: recordings checked at once, or parts of a single long one.", metavar="N"
+        ),
+    ] = 1,
     json: Annotated[bool, typer.Option("--json", help="Print one report per line as JSON.")] = False,
     no_page: Annotated[bool, typer.Option("--no-page", help="Write no report.html.")] = False,
     annotate: Annotated[

@@ -80,7 +80,9 @@ def test_options_reach_the_screening(sigguard, calls, recordings, tmp_path):
     words = "--profile strip --segment 7.5 --mains 60 --no-page --annotate --fs 250 --units uV --fridericia --with-identity"
     assert sigguard("check", *recordings(a="accept"), "--out", tmp_path / "out", *words.split()).code == 0
     (call,) = calls
+    assert callable(call.pop("progress"))
     assert call == {
+        "jobs": 1,
         "path": tmp_path / "a.txt",
         "out_dir": tmp_path / "out",
         "name": "a",
