@@ -70,12 +70,14 @@ def electrode_powers(
     end_s: Floats,
     mains_hz: NDArray[np.floating],
     mains_uv: NDArray[np.floating],
+    wanted: NDArray[np.bool_] | None = None,
 ) -> ElectrodePowers | None:
     """Powers in S strips of the same leads; None where the leads cannot tell the electrodes apart.
 
     ``strips_mv`` (S, n_leads, N), mV, NaN where missing; ``analysis`` of the same rows, strip by strip;
     ``start_s``, ``end_s`` (S,); ``mains_hz`` and ``mains_uv`` (S, n_leads) as the features have them. A lead
-    that is missing or flat for long is left out of its strip; if the rest cannot tell, the strip is NaN.
+    that is missing or flat for long is left out of its strip; if the rest cannot tell, the strip is NaN. So is one
+    that is not ``wanted`` (S,).
     """
     algebra = algebra_of(tuple(leads))
     if not algebra.tells:
@@ -87,7 +89,7 @@ def electrode_powers(
     open_ = between_beats(analysis, residual.shape, end_s - start_s)
     lost = (analysis.missing.mean(axis=1) > MOST_MISSING) | (analysis.flat.mean(axis=1) > MOST_FLAT)
     lost = lost.reshape(n_strips, n_leads)
-    for k in range(n_strips):
+    for k in range(n_strips) if wanted is None else np.flatnonzero(wanted):
         part = _without(algebra, lost[k])
         if part is None:
             continue

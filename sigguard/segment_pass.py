@@ -22,7 +22,7 @@ from sigguard.profile import Profile
 from sigguard.recording import RecordingInfo
 from sigguard.reliability import ReliabilityModel
 from sigguard.rhythm_gaps import at_rest
-from sigguard.segments import Segments
+from sigguard.segments import GRADES, Segments
 from sigguard.verdicts import (
     NO_WAVE,
     agreeing_leads,
@@ -34,6 +34,8 @@ from sigguard.verdicts import (
 from sigguard.workers import Workers
 
 GLOBAL_MOST_S = 60.0  # longer recordings have too much change in them for one global value
+POWERS_ALL_S = 600.0  # of longer recordings some of the spoilt segments tell whose noise it is
+POWERS_OF = 16  # one segment in so many is asked, wherever blocks begin
 LEAST_BATCHES = 6  # below that, starting other processes takes longer than they save
 Progress = Callable[[float], None]
 
@@ -167,6 +169,11 @@ def _measure_batch(
         end_s=segments.end_s[::n_leads],
         mains_hz=hum[:, 0].reshape(batch.count, n_leads),
         mains_uv=hum[:, 1].reshape(batch.count, n_leads),
+        wanted=None
+        if info.duration_s <= POWERS_ALL_S
+        else _some_spoilt(
+            segments.grade, n_leads, plan.start[batch.first : batch.first + batch.count], batch.size
+        ),
     )
     return Part(
         segments,
@@ -184,6 +191,14 @@ def _measure_batch(
         common.get("beat_mv"),
         common.get("marks_ms"),
     )
+
+
+def _some_spoilt(
+    grade: NDArray[np.int8], n_leads: int, start: NDArray[np.int64], size: int
+) -> NDArray[np.bool_]:
+    """(S,): every POWERS_OF-th segment of the recording, if a lead there is below the highest grade."""
+    spoilt = (grade.reshape(-1, n_leads) < GRADES.index("all")).any(axis=1)
+    return np.asarray(spoilt & (start // size % POWERS_OF == 0))
 
 
 def _table(
