@@ -18,11 +18,16 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from numpy.typing import NDArray
 
 import sigguard
-from sigguard import placement
+from sigguard import placement, screening
+from sigguard.blocks import plan_segments
 from sigguard.electrodes import LEADS_12
+from sigguard.noise import MAINS_HZ
 from sigguard.placement_model import CHEST_HYPOTHESES, LIMB_HYPOTHESES
+from sigguard.profile import load_profile
+from sigguard.segment_pass import measure_all, shipped_model
 from sigguard.simulate.misplacement import REMAINDER, misplaced
 from sigguard.training.carriers import real_carrier
 from sigguard.training.placement import example, learn
@@ -49,8 +54,20 @@ def rhythms(folder: Path) -> dict[str, str]:
         return {row["ID"].strip(): row["Rhythms"].strip() for row in csv.DictReader(table)}
 
 
-def held_out(folder: Path, truths: tuple[str, ...], *, seed: int = 0) -> list[Seen]:
-    """Every record unswapped and under each of ``truths``, each judged by a model of other subjects."""
+def named_in(x_mv: NDArray[np.float64], fs_hz: float) -> dict[str, float]:
+    """What the check says of the places of the electrodes, without the rest of its report."""
+    source = screening._InMemory(sigguard.Recording(x_mv, fs_hz, LEADS_12))
+    plan = plan_segments(source.info.n_samples, fs_hz)
+    parts = list(measure_all(source, plan, shipped_model(), load_profile("resting"), MAINS_HZ))
+    found = screening._placement(parts, parts[0].segments, ())
+    return {p.finding: p.probability for p in found}
+
+
+def held_out(folder: Path, truths: tuple[str, ...], *, seed: int = 0, every: int = 1) -> list[Seen]:
+    """Records unswapped and under each of ``truths``, each judged by a model of other subjects.
+
+    All records train the folds they are not in; one in ``every`` is judged.
+    """
     rhythm = rhythms(folder)
     names = sorted((p.stem for p in folder.glob("*.hea")), key=int)
     carriers = {name: real_carrier(folder, name) for name in names}
@@ -62,14 +79,13 @@ def held_out(folder: Path, truths: tuple[str, ...], *, seed: int = 0) -> list[Se
         for k in range(FOLDS):
             model = learn([examples[name] for name in names if fold[name] != k])
             patch.setattr(placement, "shipped_placement_model", lambda model=model: model)
-            for name in (n for n in names if fold[n] == k):
+            for name in (n for n in names[::every] if fold[n] == k):
                 carrier = carriers[name]
                 for truth in (UNSWAPPED, *truths):
                     x = carrier.signal_mv  # unswapped as recorded, with all its own misfit of the lead laws
                     if truth != UNSWAPPED:
                         x = misplaced(x, truth, remainder=float(rng.uniform(*REMAINDER)))
-                    report = sigguard.check(sigguard.Recording(x, carrier.fs_hz, LEADS_12))
-                    named = {p.finding: p.probability for p in report.placement}
+                    named = named_in(x, carrier.fs_hz)
                     seen.append(Seen(name, rhythm[name].startswith("Sinus"), truth, named))
     return seen
 
@@ -92,20 +108,20 @@ def seen(open_data: Path) -> list[Seen]:
     folder = open_data / "ludb"
     if not folder.is_dir():
         pytest.skip("no 12-lead records in the open data")
-    return held_out(folder, SWAPS)
+    return held_out(folder, SWAPS, every=2)
 
 
 def test_limb_swaps_are_found(seen: list[Seen]) -> None:
     share = found_share(seen)
     for name in ("LA/RA", "RA/LL", "RA/RL", "LA/RL"):
-        assert share[f"{name} swapped"] >= 0.95, share
+        assert share[f"{name} swapped"] >= 0.92, share  # of 50 subjects; 0.95 is asked of all (the script)
 
 
 def test_neighbouring_chest_swaps_are_found(seen: list[Seen]) -> None:
     share = found_share(seen)
     pairs = [share[name] for name in CHEST_HYPOTHESES[1:6]]
     assert np.mean(pairs) >= 0.90, share
-    assert min(pairs) >= 0.87, share  # 0.90 less one standard error of a hundred subjects
+    assert min(pairs) >= 0.86, share  # 0.90 less one standard error of fifty subjects
 
 
 def test_sinus_rhythm_rightly_placed_is_left_alone(seen: list[Seen]) -> None:
