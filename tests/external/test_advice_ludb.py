@@ -255,10 +255,10 @@ def line(kind: str, found: list[Outcome]) -> str:
 
 @pytest.mark.parametrize("kind", KINDS)
 def test_the_first_advice_is_the_cure_and_keeps_its_word(open_data: Path, kind: str) -> None:
-    """A floor that eight scenes must hold; the figures come from the script with 200."""
-    found = trial(open_data, kind, 8, seed=2)
-    assert len(found) == 8
-    assert sum(o.right for o in found) >= 6
+    """A floor that four scenes must hold; the figures come from the script with 200."""
+    found = trial(open_data, kind, 4, seed=2)
+    assert len(found) == 4
+    assert sum(o.right for o in found) >= 3
     assert 0.5 <= np.median([o.ratio for o in found if o.right]) <= 1.5
 
 

@@ -155,35 +155,34 @@ def share(hits: list[bool]) -> float:
     return sum(hits) / max(len(hits), 1)
 
 
-# Every second record of the untouched half, for speed; the script takes all of it.
-
+# Every fifth record of the untouched half, for speed; the script takes all of it.
 
 # Asked at the least noise: 0.98 and 0.90. Not reached there: a record's own disturbance is often as large. The bars
 # at the least noise only guard against getting worse; at four times that noise they are the asked ones.
 
 
 def test_the_disturbed_electrode_is_named_first(open_data: Path) -> None:
-    cases = one_electrode(open_data, "test", 3, 8, times=(1.0, 4.0))
-    assert len(cases) >= 120
+    cases = one_electrode(open_data, "test", 3, 20, times=(1.0, 4.0))
+    assert len(cases) >= 40
     assert share([c.right for c in cases if c.times == 1]) >= 0.75
     assert share([c.right for c in cases if c.times == 4]) >= 0.95
 
 
 def test_two_disturbed_electrodes_are_the_first_two(open_data: Path) -> None:
-    cases = two_electrodes(open_data, "test", 3, 8, times=(1.0, 4.0))
-    assert len(cases) >= 40
+    cases = two_electrodes(open_data, "test", 3, 20, times=(1.0, 4.0))
+    assert len(cases) >= 12
     assert share([c.right for c in cases if c.times == 1]) >= 0.60
     assert share([c.right for c in cases if c.times == 4]) >= 0.90
 
 
 def test_hum_on_all_leads_is_not_pinned_on_one_electrode(open_data: Path) -> None:
-    cases = hum_everywhere(open_data, 3, 8)
-    assert len(cases) >= 40
+    cases = hum_everywhere(open_data, 3, 16)
+    assert len(cases) >= 20
     # asked 0.95: reached for hum through the cable (0.957), not for hum alike in every lead (0.88)
     assert share([not pinned for _, _, pinned in cases]) >= 0.85
 
 
-@pytest.mark.parametrize("every", [8])
+@pytest.mark.parametrize("every", [16])
 def test_few_recordings_as_they_are_name_an_electrode(open_data: Path, every: int) -> None:
     """A loose guard: some of these records are disturbed at an electrode of their own (looked at by eye)."""
     found = list(carriers(open_data, 3, every))

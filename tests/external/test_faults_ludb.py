@@ -304,16 +304,16 @@ def records_of(folder: Path, *, develop: bool) -> list[str]:
 
 
 def test_the_right_fault_is_named_first(open_data: Path) -> None:
-    names = records_of(open_data, develop=False)[::3]
+    names = records_of(open_data, develop=False)[::6]
     if not names or not (open_data / "nstdb" / "em.hea").is_file():
         pytest.skip("no hand-marked records or no recorded noise in the open data")
-    singles = run(open_data, names, single_plan(), rounds=3, part="test")
+    singles = run(open_data, names, single_plan(), rounds=2, part="test")
     n, right = first_right(singles)
-    assert n >= 80
+    assert n >= 40
     assert right / n >= 0.85  # the goal is 0.92, met on the whole set (README); this is a small sample
     pairs = run(open_data, names, pair_plan(), rounds=2, part="test")
     n, right = both_named(pairs)
-    assert n >= 30
+    assert n >= 15
     assert right / n >= 0.65  # the goal is 0.80
 
 
