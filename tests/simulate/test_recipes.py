@@ -16,7 +16,7 @@ def test_the_training_recipe_holds_what_the_method_asks():
     recipe = training_recipe()
     assert recipe.snr_db == (-6.0, 30.0)
     assert recipe.duration_s == (5.0, 30.0)
-    assert recipe.rhythms == RHYTHM_WEIGHTS
+    assert set(recipe.rhythms) == set(RHYTHM_WEIGHTS)  # its own weights: more of what is hard to trust
     assert set(recipe.disturbances) == set(recipes.DISTURBANCES)
     assert sum(recipe.rhythms.values()) == pytest.approx(1.0)
 
@@ -55,7 +55,7 @@ def test_an_installed_package_comes_first(tmp_path, monkeypatch):
 @pytest.mark.parametrize(
     ("old", "new", "message"),
     [
-        ("sinus = 0.24", "samba = 0.24", "samba"),
+        ("sinus = 0.20", "samba = 0.20", "samba"),
         ("wander = 0.12", "wander = -1", "negative"),
         ("[snr_db]", "[snr]", "snr_db"),
         ("low = -6.0", "low = ", "cannot be read"),

@@ -7,6 +7,7 @@ import pytest
 from scipy.stats import beta, norm
 
 from sigguard.training.calibrate import (
+    EACH_KIND,
     CalibrationSettings,
     calibrate,
     fit_bound,
@@ -82,8 +83,8 @@ def test_promise_holds_for_the_worst_kind_of_noise() -> None:
         groups = np.stack([bad, ~bad])
         safe, blind = fit_bound(score, error, groups), fit_bound(score, error, groups[:0])
         fresh_score, fresh = drawn(rng, 4000)
-        assert np.mean(3.0 * fresh <= safe(fresh_score)) >= 0.945
-        assert np.mean(3.0 * fresh <= blind(fresh_score)) < 0.93  # what it would be without the groups
+        assert np.mean(3.0 * fresh <= safe(fresh_score)) >= EACH_KIND - 0.01  # what 900 rows of a kind allow
+        assert np.mean(3.0 * fresh <= blind(fresh_score)) < EACH_KIND - 0.01  # what it would be without the groups
 
 
 def test_lost_values_push_the_bound_to_infinity_where_they_are_common() -> None:
