@@ -36,7 +36,7 @@ __all__ = [
 ]
 
 WAVE_BAND_HZ = (0.5, 35.0)  # 0.5 Hz forwards and backwards is within Kligfield et al. 2007 (0.67 Hz)
-CHUNK_ROWS = 96  # keeps the work of one pass within the cache and its memory flat
+CHUNK_ROWS = 48  # keeps the work of one pass within the cache and its memory flat
 MIN_P_MV, MIN_P_RATIO, MIN_P_EXPLAINED = 0.015, 4.0, 0.40
 STEADY_P_RATIO, STEADY_PR_MS = (
     3.0,
