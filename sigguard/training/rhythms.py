@@ -6,9 +6,10 @@ prints the constants as they stand in ``sigguard/vf_score.py`` and the figures o
 the seed goes in. Lethal: fibrillation, flutter, torsades and very fast wide tachycardia of the simulator, and as many
 strips of a plainer kind (a few drifting oscillators of 1.7 to 8 Hz, from nearly a sine to ragged), with chest
 compressions, pacing spikes that go on, wander and all other disturbances laid on them: what a rhythm looks like in one
-lead varies far more than any one simulator knows, and a fit to this simulator's alone is too narrow. Ordinary: all other rhythms that have beats, under every simulated disturbance
-and those of ``simulate/rhythm_noise`` (climbing, handling, loose contact), some with a QRS of fast deflections
-only, noise-stress ratio -6 to 24 dB. One logistic regression on the nine shape indices of ``rhythm_shape`` and their products.
+lead varies far more than any one simulator knows, and a fit to this simulator's alone is too narrow. Ordinary: all
+other rhythms that have beats, under every simulated disturbance and those of ``simulate/rhythm_noise`` (climbing,
+handling, loose contact), some with a QRS of fast deflections only, noise-stress ratio -6 to 24 dB. One logistic
+regression on the nine shape indices of ``rhythm_shape`` and their products.
 """
 
 from __future__ import annotations
