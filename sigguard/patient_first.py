@@ -19,6 +19,7 @@ from sigguard.findings import PatientFirst
 from sigguard.rhythm_beats import Train, find_trains
 from sigguard.rhythm_gaps import at_rest, beats_as_before, beats_beneath, contact
 from sigguard.rhythm_shape import SHAPE_NAMES, WINDOW_S, Work, prepare, shape_indices
+from sigguard.rhythm_sharp import sharp_beats
 from sigguard.vf_score import SMALLEST_RMS_MV, fibrillation_score
 
 Floats = NDArray[np.floating]
@@ -99,6 +100,8 @@ def find_patient_first(
     shape, rms_mv = shape_indices(work)
     states = _judge(work, shape, rms_mv, lead_beats_s, qrs_ms)
     cleared = np.any(states.steady, axis=0)
+    if (states.wavy & ~cleared).any():
+        cleared |= np.any(sharp_beats(work), axis=0)
     wavy = states.wavy & ~cleared
     held = _held(np.any(wavy, axis=0), cleared, round(HOLD_S * work.fs_hz / work.step))
     found = _runs(wavy, work, leads, "fibrillation-or-flutter", 1, within=held)
@@ -287,13 +290,15 @@ def _standstill_findings(states: _States, work: Work, leads: Sequence[str]) -> l
     lead among many still ones does not either: P waves may go on, and be high in it. Windows at
     either end of a pause still see the beats around it, so the middle decides and EDGE_S beside it follow.
     """
+    silent = np.any(states.quiet, axis=0)
+    if not silent.any():
+        return []
     n = work.y_mv.shape[1]
     n_windows = states.steady.shape[1]
     centre = np.clip(
         np.round((np.arange(n) - work.length / 2) / work.step).astype(int), 0, max(n_windows - 1, 0)
     )
     beating = states.steady[:, centre] & ~states.quiet if n_windows else np.zeros_like(states.quiet)
-    silent = np.any(states.quiet, axis=0)
     cleared = beating.sum(axis=0) >= CLEARING_SHARE * states.quiet.sum(axis=0)
     edge = round(EDGE_S * work.fs_hz)
     found = []

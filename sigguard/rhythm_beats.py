@@ -53,7 +53,7 @@ def find_trains(work: Work, lead_beats_s: Sequence[Floats]) -> tuple[Train, Trai
     Where both agree in every beat, both are the same object.
     """
     steepness = _steepness(work)
-    own = _steep_peaks(steepness, work)
+    own = steep_peaks(steepness, work)
     given = _given_peaks(steepness, work, lead_beats_s)
     found = measure_train(work, steepness, *own)
     if np.array_equal(own[0], given[0]) and np.array_equal(own[1], given[1]):
@@ -67,7 +67,7 @@ def _steepness(work: Work) -> Floats:
     return uniform_filter1d(slope, 2 * round(0.05 * work.fs_hz) + 1, axis=1, mode="nearest")
 
 
-def _steep_peaks(steepness: Floats, work: Work) -> tuple[Ints, Ints]:
+def steep_peaks(steepness: Floats, work: Work) -> tuple[Ints, Ints]:
     """(rows, samples) of peaks well above the usual: the median over 5 s of the highest value within each second."""
     n_leads, n = steepness.shape
     second = work.step
@@ -144,8 +144,9 @@ def measure_train(work: Work, steepness: Floats, row: Ints, at: Ints) -> Train:
     index = np.clip(at[:, None] + np.arange(-half, half + 1), 0, n - 1)
     piece = work.y_mv[row[:, None], index]
     steep = steepness[row, at]
-    near = _likeness(piece, steep, row, 1)
-    four = np.sort(np.concatenate([near, _likeness(piece, steep, row, 2)]), axis=0)
+    sums = np.cumsum(piece, axis=1), np.cumsum(piece * piece, axis=1)
+    near = _likeness(piece, steep, row, 1, sums)
+    four = np.sort(np.concatenate([near, _likeness(piece, steep, row, 2, sums)]), axis=0)
     widths = _widths_ms(piece, work.fs_hz)
     return Train(row, at, np.ptp(piece, axis=1), steep, widths, near.max(axis=0), four[-1], four[-2])
 
@@ -166,8 +167,11 @@ def _widths_ms(piece: Floats, rate: float) -> Floats:
     return (right_gap - left_gap - 1) * 1e3 / rate
 
 
-def _likeness(piece: Floats, steep: Floats, row: Ints, apart: int) -> Floats:
-    """(2, n): correlations with the complexes ``apart`` before and after in the same lead, -1 where there is none."""
+def _likeness(piece: Floats, steep: Floats, row: Ints, apart: int, upto: tuple[Floats, Floats]) -> Floats:
+    """(2, n): correlations with the complexes ``apart`` before and after in the same lead, -1 where there is none.
+
+    ``upto``: running sums of the pieces and of their squares.
+    """
     count = len(piece)
     if count <= apart:
         return np.full((2, count), -1.0)
@@ -175,8 +179,7 @@ def _likeness(piece: Floats, steep: Floats, row: Ints, apart: int) -> Floats:
     core = piece[:, TRIM:-TRIM] - piece[:, TRIM:-TRIM].mean(axis=1, keepdims=True)
     first, second = core[:-apart], piece[apart:]
     # the core has mean 0, so that the mean of the moved piece drops out of the product
-    sums = np.cumsum(second, axis=1)
-    squares = np.cumsum(second * second, axis=1)
+    sums, squares = upto[0][apart:], upto[1][apart:]
     best = np.full(count - apart, -1.0)
     norm = np.sqrt((first * first).sum(axis=1))
     for k in range(2 * TRIM + 1):

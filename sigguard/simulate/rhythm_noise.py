@@ -1,4 +1,5 @@
-"""What makes an ordinary rhythm look like a lethal one: handling, climbing, chest compressions, loose contact.
+"""What makes an ordinary rhythm look like a lethal one, or a lethal one like an ordinary: handling, climbing, chest
+compressions, loose contact; a QRS of nothing but fast deflections; pacing spikes that no beat follows.
 
 These serve the search for lethal rhythms (training/rhythms.py) and are apart from ``disturbance`` so that the
 corpus of the reliability model stays what it is. Sizes and rates are common practice, no source: compressions
@@ -17,7 +18,13 @@ from sigguard.simulate.continuous import drifting_phase, slow_noise
 from sigguard.simulate.disturbance import draw_disturbance, draw_envelope
 from sigguard.simulate.shapes import Array
 
-__all__ = ["LIKE_RHYTHM_KINDS", "apply_loose_contact", "draw_like_rhythm"]
+__all__ = [
+    "LIKE_RHYTHM_KINDS",
+    "apply_loose_contact",
+    "draw_like_rhythm",
+    "draw_pacing_spikes",
+    "with_fast_qrs",
+]
 
 
 def draw_like_rhythm(
@@ -104,4 +111,56 @@ def apply_loose_contact(x_mv: Array, rng: np.random.Generator, *, fs_hz: float, 
         after = np.maximum(t - at_s, 0.0)
         lurch = rng.normal(0, 1.0) * np.exp(-after / np.exp(rng.uniform(np.log(0.1), np.log(2.0))))
         out += np.where(t >= at_s, lurch, 0.0)
+    return out
+
+
+FINE = 8  # a spike is drawn so much finer than it is sampled
+
+
+def draw_pacing_spikes(
+    rng: np.random.Generator, n_samples: int, *, fs_hz: float, rate_bpm: float | None = None
+) -> Array:
+    """Spikes of 0.4 to 2 ms at a steady rate (50 to 110/min unless given), (n_samples,), mV.
+
+    0.3 to 20 mV at the electrode, less once through the recorder's low-pass (35 to 120 Hz, without delay); in one of
+    three a charge is left behind that fades within some 0.1 s. Sizes are common practice, no source.
+    """
+    rr_s = 60 / (rng.uniform(50, 110) if rate_bpm is None else rate_bpm)
+    at_s = rng.uniform(0, rr_s) + rr_s * np.arange(int(n_samples / fs_hz / rr_s) + 1)
+    at_s = at_s + 0.0005 * rng.standard_normal(len(at_s))
+    width_s = rng.uniform(0.0004, 0.002)
+    size_mv = np.exp(rng.uniform(np.log(0.3), np.log(20.0)))
+    left_mv = rng.uniform(0.02, 0.15) * min(size_mv, 1.0) if rng.random() < 0.33 else 0.0
+    t_s = np.arange(FINE * n_samples) / (FINE * fs_hz)
+    x = np.zeros(t_s.size)
+    for start_s in at_s:
+        first = np.searchsorted(t_s, start_s)
+        x[first : first + max(1, round(width_s * FINE * fs_hz))] += size_mv
+        tail = slice(first, first + round(0.6 * FINE * fs_hz))
+        x[tail] -= left_mv * np.exp(-(t_s[tail] - start_s) / 0.1)
+    low_hz = min(float(rng.choice((35.0, 60.0, 100.0, 120.0))), 0.45 * fs_hz)
+    gain = 1 / np.sqrt(1 + (np.fft.rfftfreq(x.size, 1 / (FINE * fs_hz)) / low_hz) ** 6)
+    return np.fft.irfft(np.fft.rfft(x) * gain, x.size)[::FINE]
+
+
+def with_fast_qrs(x_mv: Array, rng: np.random.Generator, *, on_s: Array, off_s: Array, fs_hz: float) -> Array:
+    """One lead, (n_samples,), whose QRS complexes are replaced by three to six deflections of 5 to 9 ms, up and down.
+
+    ``on_s``, ``off_s``: where each QRS begins and ends, s (NaN: left as it is). Nearly all of such a complex
+    lies above 28 Hz. P and T stay.
+    """
+    out, t_s = np.array(x_mv, dtype=np.float64), np.arange(len(x_mv)) / fs_hz
+    count, apart_s = int(rng.integers(3, 7)), rng.uniform(0.007, 0.011)
+    sign = rng.choice((-1.0, 1.0))
+    heights = sign * (-1.0) ** np.arange(count) * rng.uniform(0.4, 1.0, count)
+    heights *= np.exp(rng.uniform(np.log(0.4), np.log(2.0)))
+    for on, off in zip(on_s, off_s, strict=True):
+        first, last = np.searchsorted(t_s, (on, off)) if np.isfinite(on + off) else (0, 0)
+        if not 0 < first < last < len(out):
+            continue
+        out[first:last] = np.linspace(out[first - 1], out[last], last - first)
+        centre_s = (on + off) / 2 + apart_s * (np.arange(count) - (count - 1) / 2)
+        size = heights * (1 + 0.15 * rng.standard_normal(count))
+        near = np.abs(t_s - (on + off) / 2) < 0.1
+        out[near] += size @ np.exp(-0.5 * ((t_s[near] - centre_s[:, None]) / (0.35 * apart_s)) ** 2)
     return out

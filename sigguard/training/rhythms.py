@@ -4,11 +4,12 @@
 
 prints the constants as they stand in ``sigguard/vf_score.py`` and the figures on patients drawn afresh. Nothing but
 the seed goes in. Lethal: fibrillation, flutter, torsades and very fast wide tachycardia of the simulator, and as many
-strips of a plainer kind (a few drifting oscillators of 1.7 to 8 Hz, from nearly a sine to ragged), with chest compressions, wander and all other
-disturbances laid on them: what a rhythm looks like in one lead varies far more than any one simulator knows, and a fit to
-this simulator's alone is too narrow. Ordinary: all other rhythms that have beats, under every simulated disturbance
-and those of ``simulate/rhythm_noise`` (climbing, handling, loose contact), noise-stress ratio -6 to 24 dB. One
-logistic regression on the nine shape indices of ``rhythm_shape`` and their products.
+strips of a plainer kind (a few drifting oscillators of 1.7 to 8 Hz, from nearly a sine to ragged), with chest
+compressions, pacing spikes that go on, wander and all other disturbances laid on them: what a rhythm looks like in one
+lead varies far more than any one simulator knows, and a fit to this simulator's alone is too narrow. Ordinary: all
+other rhythms that have beats, under every simulated disturbance and those of ``simulate/rhythm_noise`` (climbing,
+handling, loose contact), some with a QRS of fast deflections only, noise-stress ratio -6 to 24 dB. One logistic
+regression on the nine shape indices of ``rhythm_shape`` and their products.
 """
 
 from __future__ import annotations
@@ -25,7 +26,12 @@ from sigguard.simulate.continuous import drifting_phase, slow_noise
 from sigguard.simulate.disturbance import draw_disturbance
 from sigguard.simulate.ecg import SimulatedECG, draw_scene, simulate
 from sigguard.simulate.recorded import qrs_peak_to_peak_mv, snr_gain
-from sigguard.simulate.rhythm_noise import apply_loose_contact, draw_like_rhythm
+from sigguard.simulate.rhythm_noise import (
+    apply_loose_contact,
+    draw_like_rhythm,
+    draw_pacing_spikes,
+    with_fast_qrs,
+)
 from sigguard.simulate.rhythms import RHYTHM_WEIGHTS
 from sigguard.vf_score import SMALLEST_RMS_MV, Constants, fibrillation_score
 
@@ -55,6 +61,8 @@ LETHAL_SNR_DB, ORDINARY_SNR_DB = (3.0, 30.0), (-6.0, 24.0)
 LETHAL_WANDER_DB = (-12.0, 30.0)
 COMPRESSIONS_SHARE = 0.15  # of the lethal strips; nobody presses on a chest whose heart beats
 PLAINER_SHARE = 0.5
+SPIKES_SHARE = 0.08  # of the lethal strips: a pacemaker that goes on
+FAST_QRS_SHARE = 0.08  # of the ordinary strips
 LOOSE_SHARE, MUSCLE_TOO_SHARE, CLEAN_SHARE = 0.15, 0.3, 0.15
 STRENGTH = 0.01  # of the regression's L2 penalty, inverse
 IN_TIME_S = 10.0
@@ -123,6 +131,8 @@ def _lethal(x_mv: Floats, ecg: SimulatedECG, rng: np.random.Generator) -> Floats
     out += gain(LETHAL_WANDER_DB) * draw_disturbance(rng, "wander", n_samples=n, fs_hz=FS_HZ)
     if rng.random() < COMPRESSIONS_SHARE:
         out += gain(LETHAL_SNR_DB) * draw_like_rhythm(rng, "compressions", n_samples=n, fs_hz=FS_HZ)
+    if rng.random() < SPIKES_SHARE:
+        out += draw_pacing_spikes(rng, n, fs_hz=FS_HZ)
     return out
 
 
@@ -144,6 +154,8 @@ def _plainer(rng: np.random.Generator, n_samples: int) -> Floats:
 
 
 def _ordinary(x_mv: Floats, ecg: SimulatedECG, rng: np.random.Generator) -> Floats:
+    if rng.random() < FAST_QRS_SHARE:
+        x_mv = with_fast_qrs(x_mv, rng, on_s=ecg.qrs_on_s, off_s=ecg.qrs_off_s, fs_hz=FS_HZ)
     size_mv = qrs_peak_to_peak_mv(x_mv, ecg.beats_s, FS_HZ)
     if rng.random() < LOOSE_SHARE:
         x_mv = apply_loose_contact(x_mv, rng, fs_hz=FS_HZ, share=float(rng.uniform(0.1, 0.8)))
