@@ -139,6 +139,18 @@ def join_findings(parts: Sequence[PatientFirst], *, gap_s: float = 0.0) -> list[
     return sorted(joined, key=lambda f: (f.start_s, f.end_s, f.pattern))
 
 
+def join_to_at_most(found: Sequence[PatientFirst], at_most: int) -> list[PatientFirst]:
+    """Findings joined over pauses just long enough that no more than ``at_most`` (three or more) are left.
+
+    Nothing of what was found is lost: the joined ones cover it and the pauses between.
+    """
+    joined, gap_s = list(found), 0.0
+    while len(joined) > max(at_most, len(TEXT)):
+        gap_s = max(2.0 * gap_s, 1.0)
+        joined = join_findings(joined, gap_s=gap_s)
+    return joined
+
+
 def _windows_in(span_s: float, work: Work) -> int:
     """How many windows in a row cover a span."""
     return 1 + int(np.ceil((span_s - WINDOW_S) * work.fs_hz / work.step - 1e-6))
