@@ -9,7 +9,6 @@ import numpy as np
 from sigguard.findings import PatientFirst, under_alarm
 from sigguard.patient_first import join_to_at_most
 from sigguard.report.document import MAX_ALARMS
-
 from tests.report.factory import make_report
 
 PATTERNS = ("fibrillation-or-flutter", "wide-fast", "standstill")
