@@ -36,6 +36,26 @@ def test_all_time_and_every_pattern_stay_covered():
     assert under_alarm(joined, middle, middle + 0.01).all()
 
 
+def test_the_shortest_pauses_go_first_and_the_text_counts():
+    starts = (0.0, 10.0, 30.0, 31.0, 60.0)
+    found = [
+        PatientFirst((lead,), t, t + 5.0, "standstill", "no beat")
+        for lead, t in zip("abcde", starts, strict=True)
+    ]
+    joined = join_to_at_most(found, 3)
+    assert [(a.start_s, a.end_s, a.leads) for a in joined] == [
+        (0.0, 15.0, ("a", "b")),
+        (30.0, 36.0, ("c", "d")),
+        (60.0, 65.0, ("e",)),
+    ]
+    assert joined[0].text.startswith("2 stretches: ") and joined[2].text == "no beat"
+
+
+def test_evenly_spread_ones_are_not_all_made_one():
+    found = [PatientFirst(("II",), 20.0 * k, 20.0 * k + 5.0, "standstill", "no beat") for k in range(4000)]
+    assert len(join_to_at_most(found, 200)) == 200
+
+
 def test_few_are_left_as_they_are():
     found = many(12)
     assert join_to_at_most(found, 12) == found
