@@ -15,7 +15,7 @@ from sigguard.segments import FAULTS, GRADES, MEASUREMENTS, Segments
 from sigguard.spans import Stretch, longest_stretch
 
 LONG_S = 1800.0  # a recording from this length on gets this view
-MOST_BINS = 50
+MOST_BINS = 26  # a day by the hour, its minutes in figures
 MOST_CELLS = 1200  # of leads times bins, so that the page stays small with many leads
 LABEL_W, MAP_W, ROW_H, BAR_H, AXIS_H = 150, 840, 30, 28, 26
 FAULT_H, FIGURE_H = 38, 12  # of a row of faults, and of the line of figures above its bars
@@ -234,22 +234,16 @@ def _when(found: Hours, k: int) -> str:
 
 
 def _axis(found: Hours, width: float, y: float) -> str:
-    every = max(1, int(np.ceil(len(found.length_s) / 12)))
+    every = max(1, int(np.ceil(len(found.length_s) / 8)))
     ticks = range(0, len(found.length_s) + 1, every)
     parts = [f'<path class="axis" d="{"".join(f"M{LABEL_W + k * width:.1f} {y}v5" for k in ticks)}"/>']
     for k in ticks:
         t_s = min(k * found.bin_s, float(found.length_s.sum()))
         anchor = "start" if k == 0 else "end" if k * width > MAP_W - 30 else "middle"
         parts.append(
-            f'<text class="tick" x="{LABEL_W + k * width:.1f}" y="{y + 20}" text-anchor="{anchor}">{_hour(t_s)}</text>'
+            f'<text class="tick" x="{LABEL_W + k * width:.1f}" y="{y + 20}" text-anchor="{anchor}">{clock(t_s)}</text>'
         )
     return "".join(parts)
-
-
-def _hour(t_s: float) -> str:
-    """``3:00``, ``2 d 6:00``: hours and minutes alone, for bins begin on whole minutes."""
-    days, rest = divmod(round(t_s / 60), 24 * 60)
-    return f"{f'{days} d ' if days else ''}{rest // 60}:{rest % 60:02d}"
 
 
 def _name(text: str, y: float) -> str:

@@ -307,3 +307,19 @@ def test_from_a_record_to_its_marks(tmp_path: Path, per_frame: int):
     # the seconds of the burst, and little besides, of the ten that the segment has
     assert set(np.arange(14.0, 16.0, 0.25)) <= set(spoilt) and len(spoilt) * 0.25 <= 4.0
     assert not any(int(s) & 0xFF & ~0x22 for s in ann.subtype)
+
+
+@pytest.mark.parametrize(("record", "first_s", "last_s"), [("cu01", 214, 508), ("cu08", 426, 486)])
+def test_recorded_fibrillation_is_neither_noisy_nor_unreadable(
+    tmp_path: Path, open_data: Path, record: str, first_s: int, last_s: int
+):
+    """Stretches marked by eye (to about 2 s), see the README of the open data."""
+    path = open_data / "cudb" / f"{record}.hea"
+    report = screen_path(path, out_dir=tmp_path, page=False, annotate=True)
+    ann = read_back(tmp_path / record / f"{record}.sgq")
+    for t in range(first_s + 2, last_s - 2):
+        assert state_at(ann, round(t * report.info.fs_hz), 0) == "clean", t
+    assert any(
+        symbol == '"' and text.startswith("PATIENT FIRST")
+        for symbol, text in zip(ann.symbol, ann.aux_note, strict=True)
+    )
