@@ -226,6 +226,8 @@ def minutes_words(seconds: float) -> str:
 
 def _figure(seconds: float) -> str:
     minutes = seconds / 60
+    if minutes < 0.05:
+        return "&lt;0.1"  # as it stands in the drawing
     return f"{minutes:.0f}" if minutes >= 9.95 else f"{minutes:.1f}"
 
 
@@ -238,6 +240,8 @@ def _axis(found: Hours, width: float, y: float) -> str:
     ticks = range(0, len(found.length_s) + 1, every)
     parts = [f'<path class="axis" d="{"".join(f"M{LABEL_W + k * width:.1f} {y}v5" for k in ticks)}"/>']
     for k in ticks:
+        if 0 < (ticks[-1] - k) * width < 110:
+            continue  # no room beside the last
         t_s = min(k * found.bin_s, float(found.length_s.sum()))
         anchor = "start" if k == 0 else "end" if k * width > MAP_W - 30 else "middle"
         parts.append(
