@@ -142,6 +142,33 @@ def join_findings(parts: Sequence[PatientFirst], *, gap_s: float = 0.0) -> list[
     return sorted(joined, key=lambda f: (f.start_s, f.end_s, f.pattern))
 
 
+def join_to_at_most(found: Sequence[PatientFirst], at_most: int) -> list[PatientFirst]:
+    """Findings of one pattern joined over the shortest pauses until no more than ``at_most`` (three or more) are left.
+
+    Nothing of what was found is lost: a joined one covers its parts and the pauses between, and its text says how
+    many they are.
+    """
+    ordered = sorted(found, key=lambda f: (f.pattern, f.start_s, f.end_s))
+    if len(ordered) <= at_most:
+        return list(found)
+    ends = np.array([f.end_s for f in ordered])
+    pauses = np.array([f.start_s for f in ordered[1:]]) - ends[:-1]
+    same = np.array([f.pattern == g.pattern for f, g in zip(ordered[:-1], ordered[1:], strict=True)])
+    order = np.argsort(np.where(same, pauses, np.inf), kind="stable")
+    joins = np.zeros(len(ordered), dtype=bool)
+    joins[1 + order[: len(ordered) - max(at_most, len(TEXT))]] = True
+    joins[1:] &= same
+    out = []
+    for part in np.split(np.arange(len(ordered)), np.flatnonzero(~joins)[1:]):
+        first, end_s = ordered[part[0]], max(ordered[k].end_s for k in part)
+        if len(part) > 1:
+            leads = tuple(dict.fromkeys(lead for k in part for lead in ordered[k].leads))
+            text = f"{len(part)} stretches: {_text(leads, first.pattern, first.start_s, end_s)}"
+            first = replace(first, leads=leads, end_s=end_s, text=text)
+        out.append(first)
+    return sorted(out, key=lambda f: (f.start_s, f.end_s, f.pattern))
+
+
 def _windows_in(span_s: float, work: Work) -> int:
     """How many windows in a row cover a span."""
     return 1 + int(np.ceil((span_s - WINDOW_S) * work.fs_hz / work.step - 1e-6))

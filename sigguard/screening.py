@@ -123,6 +123,8 @@ def screen_path(
                 n_samples=source.info.n_samples,
                 channels=source.channels,
                 n_signals=source.n_signals,
+                patient_first=report.patient_first,
+                samples_per_frame=source.samples_per_frame,
             )
         if page:
             from sigguard.report.page import render_page

@@ -81,19 +81,41 @@ def covered_seconds(grid: Grid, column: NDArray[np.bool_]) -> float:
     return float(grid.length_s[seen].sum())
 
 
-def longest_run(segments: Segments, column: NDArray[np.bool_]) -> tuple[float, int | None]:
-    """The longest time on end for which a column, (n,), is true in one lead, and that lead's index."""
+@dataclass(frozen=True, slots=True)
+class Stretch:
+    """A time on end in one lead, or in all of them (``lead`` None)."""
+
+    start_s: float
+    end_s: float
+    lead: int | None
+
+
+def longest_stretch(segments: Segments, column: NDArray[np.bool_], *, every: bool = False) -> Stretch | None:
+    """The longest time on end for which a column, (n,), is true in one lead, or with ``every`` in all at once.
+
+    None where it never is; the first lead and the earliest time of several as long.
+    """
+    if not len(segments):
+        return None
     grid = Grid.of(segments)
     on, breaks = grid.spread(column, False), grid.breaks()
-    best: tuple[float, int | None] = (0.0, None)
-    for lead in range(grid.n_leads):
-        run = on[:, lead]
+    best: Stretch | None = None
+    for lead in (None,) if every else range(grid.n_leads):
+        run = np.asarray(on.all(axis=1) if lead is None else on[:, lead])
         starts = np.flatnonzero(run & (breaks | ~np.concatenate(([False], run[:-1]))))
         ends = np.flatnonzero(run & np.concatenate((breaks[1:] | ~run[1:], [True])))
         if len(starts):
             length = grid.end_s[ends] - grid.start_s[starts]
-            best = max(best, (float(length.max()), lead), key=lambda found: found[0])
+            k = int(length.argmax())
+            if best is None or length[k] > best.end_s - best.start_s:
+                best = Stretch(float(grid.start_s[starts[k]]), float(grid.end_s[ends[k]]), lead)
     return best
+
+
+def longest_run(segments: Segments, column: NDArray[np.bool_]) -> tuple[float, int | None]:
+    """The longest time on end for which a column, (n,), is true in one lead, and that lead's index."""
+    found = longest_stretch(segments, column)
+    return (0.0, None) if found is None else (found.end_s - found.start_s, found.lead)
 
 
 def lead_summaries(segments: Segments) -> tuple[LeadSummary, ...]:

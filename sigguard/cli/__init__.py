@@ -13,6 +13,7 @@ from typing import Annotated
 import typer
 
 from sigguard.cli.check import check
+from sigguard.cli.compare import compare
 from sigguard.cli.demo import demo
 from sigguard.cli.train import train
 from sigguard.errors import ProfileError, SigguardError, UsageError
@@ -54,6 +55,7 @@ def _top(
 
 
 app.command()(check)
+app.command()(compare)
 app.command()(demo)
 app.command()(train)
 

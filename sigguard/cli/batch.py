@@ -124,17 +124,17 @@ def check_one(
         link = f"{name}/report.{'html' if settings.page else 'json'}"
         row = replace(row_of(report, link=link), name=name)
     except SigguardError as err:
-        return Outcome(path=path, name=name, error=_sentence(path, str(err)))
+        return Outcome(path=path, name=name, error=sentence(path, str(err)))
     except MemoryError:
-        return Outcome(path=path, name=name, error=_sentence(path, "not enough memory to check it"))
+        return Outcome(path=path, name=name, error=sentence(path, "not enough memory to check it"))
     except Exception as err:  # a mistake of ours on one recording must not keep the others from being checked
         fault = f"could not be checked, a fault of the program: {type(err).__name__}: {err}; please report it"
-        return Outcome(path=path, name=name, error=_sentence(path, fault))
+        return Outcome(path=path, name=name, error=sentence(path, fault))
     alarm = bool(report.patient_first)
     return Outcome(path=path, name=name, verdict=report.verdict, patient_first=alarm, line=line, row=row)
 
 
-def _sentence(path: Path, text: str) -> str:
+def sentence(path: Path, text: str) -> str:
     """One line that names the file, without control characters that a header may hold."""
     text = "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in " ".join(text.split()))
     return text if str(path) in text else f"{path}: {text}"
@@ -190,7 +190,7 @@ def _at_once(
                         yield from in_processes([(path, name)])
                     except BrokenExecutor:
                         died = "could not be checked: its process was killed, as a rule for want of memory"
-                        yield Outcome(path=path, name=name, error=_sentence(path, died))
+                        yield Outcome(path=path, name=name, error=sentence(path, died))
     result.interrupted = stop.is_set()
 
 

@@ -54,7 +54,10 @@ class OpenRecording(ABC):
     ``scales`` holds one scale for each lead, or is None where the format has no digital values
     (text) or they change their meaning on the way (segments of different gain). ``channels``
     are the numbers of the leads among all signals of the file, from 0; ``n_signals`` counts these.
+    ``samples_per_frame``: samples of a lead in one frame, the unit in which WFDB annotations count time.
     """
+
+    samples_per_frame: int = 1
 
     def __init__(
         self,

@@ -322,6 +322,7 @@ class OpenWfdb(OpenRecording):
     ) -> None:
         super().__init__(info, scales=scales, channels=channels, n_signals=n_signals)
         self._pieces, self._per_frame, self._unit = pieces, per_frame, unit
+        self.samples_per_frame = per_frame
         self._lasts = [piece.last for piece in pieces]
 
     def _read_mv(self, start: int, stop: int) -> NDArray[np.float64]:

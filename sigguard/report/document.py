@@ -28,6 +28,7 @@ from sigguard.findings import (
     Span,
     Value,
 )
+from sigguard.patient_first import join_to_at_most
 from sigguard.recording import RecordingInfo
 from sigguard.report.table import SegmentTable, round_up
 from sigguard.report.words import clean
@@ -35,6 +36,7 @@ from sigguard.segments import GRADES, MEASUREMENTS, UNITS, Segments
 
 SCHEMA_NAME = "sigguard.report/1"
 GLOBAL_VALUES = ("rate", "pr", "qrs", "qt", "qtc")
+MAX_ALARMS = 500  # patient-first stretches told one by one; more are told joined over the pauses between them
 DECIMALS = {"1/min": 1, "ms": 1, "mV": 4}  # how finely a value is given, by unit
 
 
@@ -78,6 +80,11 @@ class Report:
     def verdict(self) -> str:
         """``accept``, ``accept-in-part`` or ``repeat``."""
         return self.judgement.verdict
+
+    @property
+    def patient_first_to_tell(self) -> tuple[PatientFirst, ...]:
+        """The patient-first stretches, joined over their pauses where there are more than can be told."""
+        return tuple(join_to_at_most(self.patient_first, MAX_ALARMS))
 
     @property
     def advice_to_tell(self) -> tuple[Advice, ...]:
@@ -130,7 +137,7 @@ class Report:
                     "pattern": p.pattern,
                     "text": clean(p.text),
                 }
-                for p in self.patient_first
+                for p in self.patient_first_to_tell
             ],
             "advice": [
                 {

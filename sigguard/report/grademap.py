@@ -9,11 +9,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.fault_summaries import gravest
+from sigguard.patient_first import join_to_at_most
 from sigguard.report.document import Report
 from sigguard.report.words import ALARM_WORDS, FAULT_WORDS, GRADE_WORDS, alarm_between, clean, clock
 from sigguard.segments import FAULTS, GRADES, Segments
 
 MAX_COLUMNS = 600
+MAX_CELLS = 4800  # of leads times columns: more leads, fewer columns, so that the page stays small
+MAX_ALARMS_DRAWN = 200
 WORD_COLUMNS = 6  # up to so many columns the cells carry words
 LABEL_W, MAP_W, ROW_H, ALARM_H, AXIS_H = 90, 900, 26, 24, 30
 NO_DATA = -1
@@ -51,16 +54,17 @@ class GradeMap:
 
 
 def grade_map(segments: Segments, *, duration_s: float) -> GradeMap:
-    """Grades by lead and time, in at most 600 columns.
+    """Grades by lead and time, in at most 600 columns (fewer where there are more than eight leads).
 
     Where a column covers several segments it shows the grade that at least half of them reach.
     """
     starts = np.unique(segments.start_s)
-    aggregated = starts.size > MAX_COLUMNS
+    most = max(100, min(MAX_COLUMNS, MAX_CELLS // max(len(segments.leads), 1)))
+    aggregated = starts.size > most
     if aggregated:
-        edges = np.linspace(0.0, duration_s, MAX_COLUMNS + 1)
+        edges = np.linspace(0.0, duration_s, most + 1)
         middle = (segments.start_s + segments.end_s) / 2
-        column = np.clip(np.searchsorted(edges, middle, side="right") - 1, 0, MAX_COLUMNS - 1)
+        column = np.clip(np.searchsorted(edges, middle, side="right") - 1, 0, most - 1)
     else:
         edges = (
             np.append(starts, max(duration_s, float(segments.end_s.max())))
@@ -96,7 +100,8 @@ def map_svg(report: Report) -> str:
             f'<text class="rowname" x="{LABEL_W - 8}" y="{y + 18}" text-anchor="end">{escape(_short(clean(lead)))}</text>'
         )
         parts.append(_row(found, i, y, scale, words=_words(report, i) if few else None))
-    parts += [_alarm(a.start_s, a.end_s, a.text, scale, top, bottom) for a in report.patient_first]
+    alarms = join_to_at_most(report.patient_first, MAX_ALARMS_DRAWN)
+    parts += [_alarm(a.start_s, a.end_s, a.text, scale, top, bottom) for a in alarms]
     parts.append(_axis(duration_s, scale, bottom))
     return "".join(parts) + "</svg>"
 

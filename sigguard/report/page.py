@@ -13,6 +13,7 @@ from sigguard.findings import CAUTION, LeadSummary, Value
 from sigguard.report.body import body_svg, common_words, electrode_rows
 from sigguard.report.document import Report
 from sigguard.report.grademap import grade_map, legend_svg, map_svg
+from sigguard.report.hours import LONG_S, hours, hours_svg, longest_rows, worst_words
 from sigguard.report.strips import StripData, by_heading, strip_svg
 from sigguard.report.table import round_up
 from sigguard.report.words import (
@@ -73,6 +74,8 @@ def render_page(report: Report, strips: Sequence[StripData] = (), *, with_identi
 
     info = report.info
     found = grade_map(report.segments, duration_s=info.duration_s)
+    long = info.duration_s >= LONG_S and len(report.segments) > 0
+    by_hour = hours(report) if long else None
     return (
         environment()
         .get_template("report.html.j2")
@@ -102,6 +105,16 @@ def render_page(report: Report, strips: Sequence[StripData] = (), *, with_identi
             aggregated=clock((found.edges_s[-1] - found.edges_s[0]) / (found.edges_s.size - 1))
             if found.aggregated
             else "",
+            hours_svg=Markup(hours_svg(by_hour)) if by_hour else "",
+            hours_each=duration_words(by_hour.bin_s) if by_hour else "",
+            longest=longest_rows(report.segments) if long else [],
+            longest_lost=worst_words(report) if long else "",
+            best=None
+            if report.best_strip is None
+            else (
+                stretch(report.best_strip.start_s, report.best_strip.end_s),
+                GRADE_WORDS[report.best_strip.grade],
+            ),
             legend=[(Markup(legend_svg(g)), GRADE_WORDS[g]) for g in reversed(GRADES)],
             groups=[(head, [Markup(strip_svg(s)) for s in group]) for head, group in by_heading(strips)],
             whole=sum(s.end_s - s.start_s for s in strips) >= 0.9 * info.duration_s * info.n_leads,

@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.fault_summaries import fault_stretches
+from sigguard.findings import under_alarm
 from sigguard.report.document import Report
 from sigguard.report.words import ALARM_WORDS, FAULT_WORDS, GRADE_WORDS, alarm_between, clean, clock, listing
 from sigguard.segments import FAULTS, GRADES, Segments
@@ -84,7 +85,7 @@ def choose_strips(report: Report, read: ReadWindow) -> list[StripData]:
 
 def _worth_showing(report: Report) -> list[tuple[float, tuple[int, ...], str]]:
     """(start_s, lead indices, heading) of the stretches to show of a long recording."""
-    info, segments = report.info, report.segments
+    info = report.info
     place = {lead: i for i, lead in enumerate(info.leads)}
     plan = []
     for alarm in report.patient_first[:3]:
@@ -95,18 +96,41 @@ def _worth_showing(report: Report) -> list[tuple[float, tuple[int, ...], str]]:
         plan.append(
             (best.start_s, tuple(range(min(12, info.n_leads))), f"Best stretch: from {clock(best.start_s)}")
         )
-    if len(segments):
-        trust = segments.reliable.sum(axis=1) + segments.grade * 10.0 - segments.fault.sum(axis=1) / 10
-        starts, where = np.unique(segments.start_s, return_inverse=True)
-        total = np.bincount(where, weights=trust) / np.bincount(where)
-        worst = int(np.argmin(total))
-        rows = np.flatnonzero(where == worst)
-        order = rows[np.argsort(trust[rows], kind="stable")][:3]
-        leads = tuple(
-            sorted(place[segments.leads[i]] for i in segments.lead_index[order] if segments.leads[i] in place)
+    if (worst := _worst(report)) is not None:
+        start_s, names = worst
+        plan.append(
+            (
+                start_s,
+                tuple(sorted(place[lead] for lead in names if lead in place)),
+                f"Worst stretch: from {clock(start_s)}",
+            )
         )
-        plan.append((float(starts[worst]), leads, f"Worst stretch: from {clock(float(starts[worst]))}"))
     return plan
+
+
+def _worst(report: Report) -> tuple[float, tuple[str, ...]] | None:
+    """Where the segments that can be trusted the least begin, and their three worst leads.
+
+    A stretch that may be a lethal rhythm is not the worst: it is told apart. One without any signal
+    shows nothing, so it counts only where there is no other.
+    """
+    segments = report.segments
+    rows = np.flatnonzero(~under_alarm(report.patient_first, segments.start_s, segments.end_s))
+    there = rows[segments.fault[rows, FAULTS.index("missing")] < 0.5]
+    rows = there if len(there) else rows
+    if not len(rows):
+        return None
+    trust = (
+        segments.reliable[rows].sum(axis=1)
+        + segments.grade[rows] * 10.0
+        - segments.fault[rows].sum(axis=1) / 10
+    )
+    starts, where = np.unique(segments.start_s[rows], return_inverse=True)
+    total = np.bincount(where, weights=trust) / np.bincount(where)
+    worst = int(np.argmin(total))
+    mine = np.flatnonzero(where == worst)
+    order = mine[np.argsort(trust[mine], kind="stable")][:3]
+    return float(starts[worst]), tuple(segments.leads[i] for i in segments.lead_index[rows[order]])
 
 
 def _strip(report: Report, x_mv: NDArray[np.float64], lead_index: int, start: int, heading: str) -> StripData:

@@ -89,7 +89,7 @@ def worklist_page(rows: Iterable[WorklistRow]) -> str:
         environment()
         .get_template("worklist.html.j2")
         .render(
-            rows=[(row, _STATE_WORDS[row.state], _SIGNS[row.state], _href(row.link)) for row in ordered],
+            rows=[(row, _STATE_WORDS[row.state], _SIGNS[row.state], href(row.link)) for row in ordered],
             n_first=sum(row.patient_first for row in ordered),
             counts=[(words, count) for words, count in counts if count],
             caution=CAUTION,
@@ -118,7 +118,7 @@ def write_worklist(rows: Sequence[WorklistRow], folder: str | os.PathLike[str]) 
     write_text_atomic(folder / "index.csv", worklist_csv(rows))
 
 
-def _href(link: str) -> str:
+def href(link: str) -> str:
     """A relative link; anything that could lead elsewhere (a scheme, a root) becomes part of a file name."""
     if not link:
         return ""
