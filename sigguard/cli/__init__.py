@@ -15,6 +15,7 @@ import typer
 from sigguard.cli.check import check
 from sigguard.cli.demo import demo
 from sigguard.cli.train import train
+from sigguard.cli.trim import trim
 from sigguard.errors import ProfileError, SigguardError, UsageError
 
 __all__ = ["app", "main"]
@@ -54,6 +55,7 @@ def _top(
 
 
 app.command()(check)
+app.command()(trim)
 app.command()(demo)
 app.command()(train)
 

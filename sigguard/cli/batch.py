@@ -81,7 +81,7 @@ def run(paths: Sequence[Path], out_dir: Path, settings: Settings, *, jobs: int, 
     work = list(zip(recordings, assign_folders(recordings, out_dir), strict=True))
     result = Result(len(work))
     outcomes = _in_turn if min(jobs, len(work)) < 2 else _at_once
-    with _progress(len(work)) as advance:
+    with progress(len(work)) as advance:
         try:
             if len(work) == 1:  # the processes then share out the one recording
                 found = iter([check_one(*work[0], out_dir, settings, as_json, jobs=jobs, progress=advance)])
@@ -124,17 +124,17 @@ def check_one(
         link = f"{name}/report.{'html' if settings.page else 'json'}"
         row = replace(row_of(report, link=link), name=name)
     except SigguardError as err:
-        return Outcome(path=path, name=name, error=_sentence(path, str(err)))
+        return Outcome(path=path, name=name, error=sentence(path, str(err)))
     except MemoryError:
-        return Outcome(path=path, name=name, error=_sentence(path, "not enough memory to check it"))
+        return Outcome(path=path, name=name, error=sentence(path, "not enough memory to check it"))
     except Exception as err:  # a mistake of ours on one recording must not keep the others from being checked
         fault = f"could not be checked, a fault of the program: {type(err).__name__}: {err}; please report it"
-        return Outcome(path=path, name=name, error=_sentence(path, fault))
+        return Outcome(path=path, name=name, error=sentence(path, fault))
     alarm = bool(report.patient_first)
     return Outcome(path=path, name=name, verdict=report.verdict, patient_first=alarm, line=line, row=row)
 
 
-def _sentence(path: Path, text: str) -> str:
+def sentence(path: Path, text: str) -> str:
     """One line that names the file, without control characters that a header may hold."""
     text = "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in " ".join(text.split()))
     return text if str(path) in text else f"{path}: {text}"
@@ -190,7 +190,7 @@ def _at_once(
                         yield from in_processes([(path, name)])
                     except BrokenExecutor:
                         died = "could not be checked: its process was killed, as a rule for want of memory"
-                        yield Outcome(path=path, name=name, error=_sentence(path, died))
+                        yield Outcome(path=path, name=name, error=sentence(path, died))
     result.interrupted = stop.is_set()
 
 
@@ -237,9 +237,14 @@ def _on_interrupt(stop: threading.Event) -> Iterator[None]:
 
 def _tell(outcome: Outcome) -> None:
     if outcome.error is not None:
-        print(outcome.error, file=sys.stderr, flush=True)  # by name, so that it passes above the bar
+        tell_error(outcome.error)
     else:
         print(outcome.line, flush=True)
+
+
+def tell_error(text: str) -> None:
+    """A line on stderr; by that name, so that it passes above the bar."""
+    print(text, file=sys.stderr, flush=True)
 
 
 def _close(result: Result, out_dir: Path) -> None:
@@ -259,7 +264,7 @@ def _close(result: Result, out_dir: Path) -> None:
 
 
 @contextmanager
-def _progress(n: int) -> Iterator[Callable[[float], None]]:
+def progress(n: int) -> Iterator[Callable[[float], None]]:
     """A bar on stderr if that is a terminal; it shows only once there is something to wait for.
 
     What it yields takes the share done, from 0 to 1.
