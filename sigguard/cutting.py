@@ -64,7 +64,9 @@ def spoilt(segments: Segments, wanted: Wanted, *, whole: bool = False) -> Floats
         return union([np.column_stack((grid.start_s, grid.end_s))[~ok]])
     windows = grid.spread(_spoilt_windows(segments, wanted), ALL_WINDOWS)[:, list(wanted.leads)]
     join = np.bitwise_or if wanted.every else np.bitwise_and
-    bits = np.where(ok, np.uint64(0), join.reduce(windows, axis=1))
+    bits = join.reduce(windows, axis=1)
+    # Leads that are spoilt at different seconds, so that no second is to blame: the whole segment.
+    bits = np.where(ok, np.uint64(0), np.where(bits == 0, np.uint64(ALL_WINDOWS), bits))
     count = grid.spread(segments.details.n_windows, 1).max(axis=1).astype(np.int64)
     slots = np.flatnonzero(~ok)
     place = np.arange(64)
@@ -153,12 +155,11 @@ def to_rest(stretches: Floats, rests_s: Floats, duration_s: float) -> Floats:
             begin[k] = _nearest(rests_s, a, a - MOST_OUTWARDS_S, a + LONGEST_RR_S)
         if b < duration_s - SAME_TIME_S:
             end[k] = _nearest(rests_s, b, b - LONGEST_RR_S, b + MOST_OUTWARDS_S)
-    for k in np.flatnonzero(
-        begin[1:] <= end[:-1] + SAME_TIME_S
-    ):  # the cut would close: give way on both sides
-        before, after = stretches[k, 1], stretches[k + 1, 0]
-        end[k] = _nearest(rests_s, before, before - LONGEST_RR_S, before)
-        begin[k + 1] = _nearest(rests_s, after, after, after + LONGEST_RR_S)
+    closed = begin[1:] <= end[:-1] + SAME_TIME_S
+    for gap in np.flatnonzero(closed).tolist():  # give way on both sides
+        before, after = stretches[gap, 1], stretches[gap + 1, 0]
+        end[gap] = _nearest(rests_s, before, before - LONGEST_RR_S, before)
+        begin[gap + 1] = _nearest(rests_s, after, after, after + LONGEST_RR_S)
     left = end > begin + SAME_TIME_S
     return np.column_stack((begin[left], end[left]))
 

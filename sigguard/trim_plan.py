@@ -38,6 +38,7 @@ Remeasure = Callable[[float, float], Segments]
 Judge = Callable[[float, float], tuple[Floats, Floats]]
 
 KEEP = GRADES[1:]
+WHOLE_S = 10.0  # a segment, which a part of it is judged with
 ROUNDS = 6  # of measuring again; in the last ones a segment that falls short goes whole
 WHOLE_FROM = 3
 OTHER_STARTS = 4  # beats at which a stretch may begin, tried where it does not hold at once
@@ -107,6 +108,8 @@ def plan_trim(
     first_bad = without(spoilt(report.segments, wanted), alarms)
     later_bad = np.zeros((0, 2))
     judge = None if remeasure is None else _judge_of(remeasure, wanted)
+    if judge is not None:
+        first_bad = _closer(judge, first_bad, duration_s)
     kept, crumbs = _kept(first_bad, alarms, rests_s, duration_s, min_span_s)
     # What is kept from end to end has been measured just so.
     for turn in range(ROUNDS if judge is not None and len(first_bad) else 0):
@@ -137,6 +140,33 @@ def _kept(
     touched = np.array([bool(((alarms[:, 0] < b) & (alarms[:, 1] > a)).any()) for a, b in runs], dtype=bool)
     crumb = short & ~touched
     return union([runs[~crumb], alarms]), runs[crumb]
+
+
+def _closer(judge: Judge, bad: Floats, duration_s: float) -> Floats:
+    """Segments that went whole, one or two on end, held to the seconds that spoil them.
+
+    From either side the longest part is looked for with which the ten seconds up to there, or from there, hold
+    when measured by themselves. Where the parts meet no second is to blame and the stretch stays as it is.
+    """
+    out = bad.copy()
+    for k, (a, b) in enumerate(bad.tolist()):
+        if not WHOLE_S - SAME_TIME_S <= b - a <= 2 * WHOLE_S + SAME_TIME_S:
+            continue
+        left = _longest(judge, a - WHOLE_S, 1.0) if a >= WHOLE_S else 0.0
+        right = _longest(judge, b, -1.0) if b <= duration_s - WHOLE_S else 0.0
+        if left + right <= b - a - 1.0:
+            out[k] = a + left, b - right
+    return out
+
+
+def _longest(judge: Judge, start_s: float, way: float) -> float:
+    """How far WHOLE_S from a start may be moved, forth (1) or back (-1), and hold; by halving, in eighths; 0 if not."""
+    low, high = 0, 8
+    while high - low > 1:
+        middle = (low + high) // 2
+        at = start_s + way * middle * WHOLE_S / 8
+        low, high = (low, middle) if len(judge(at, at + WHOLE_S)[1]) else (middle, high)
+    return low * WHOLE_S / 8
 
 
 def _judge_of(remeasure: Remeasure, wanted: Wanted) -> Judge:
