@@ -6,7 +6,16 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 __version__ = "0.1.0"
-__all__ = ["Recording", "Report", "SigguardError", "__version__", "check", "open_recording", "read_recording"]
+__all__ = [
+    "Recording",
+    "Report",
+    "SigguardError",
+    "__version__",
+    "check",
+    "open_recording",
+    "read_recording",
+    "trim",
+]
 
 if TYPE_CHECKING:
     from sigguard.errors import SigguardError
@@ -14,6 +23,7 @@ if TYPE_CHECKING:
     from sigguard.recording import Recording
     from sigguard.report.document import Report
     from sigguard.screening import check
+    from sigguard.trimming import trim
 
 _HOME = {
     "Recording": "sigguard.recording",
@@ -22,6 +32,7 @@ _HOME = {
     "check": "sigguard.screening",
     "open_recording": "sigguard.readers",
     "read_recording": "sigguard.readers",
+    "trim": "sigguard.trimming",
 }
 
 

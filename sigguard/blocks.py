@@ -16,7 +16,9 @@ from sigguard.errors import UsageError
 
 MARGIN_S = 2.0
 MIN_REST_S = 5.0
-BLOCK_ROWS = 48  # lead-segments in one block: enough to work in bulk, little enough to stay small and in the cache
+BLOCK_ROWS = (
+    48  # lead-segments in one block: enough to work in bulk, little enough to stay small and in the cache
+)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -24,7 +24,9 @@ WORDS, SIGNAL, EDGES, JOINERS, CLI = range(5)
 FLOOR = {
     **dict.fromkeys(("errors", "recording", "segments", "findings", "profile", "resources"), WORDS),
     **dict.fromkeys(("readers", "writers", "report"), EDGES),
-    **dict.fromkeys(("screening", "segment_pass", "collecting", "stored", "workers", "trim"), JOINERS),
+    **dict.fromkeys(
+        ("screening", "segment_pass", "collecting", "stored", "workers", "trimming", "trim_plan"), JOINERS
+    ),
     **dict.fromkeys(
         ("rescoring", "acts", "spoilt_strips", "compare", "live", "inbox", "simulate", "training"), JOINERS
     ),

@@ -16,6 +16,7 @@ from sigguard.cli.check import check
 from sigguard.cli.compare import compare
 from sigguard.cli.demo import demo
 from sigguard.cli.train import train
+from sigguard.cli.trim import trim
 from sigguard.errors import ProfileError, SigguardError, UsageError
 
 __all__ = ["app", "main"]
@@ -55,6 +56,7 @@ def _top(
 
 
 app.command()(check)
+app.command()(trim)
 app.command()(compare)
 app.command()(demo)
 app.command()(train)

@@ -81,7 +81,7 @@ def run(paths: Sequence[Path], out_dir: Path, settings: Settings, *, jobs: int, 
     work = list(zip(recordings, assign_folders(recordings, out_dir), strict=True))
     result = Result(len(work))
     outcomes = _in_turn if min(jobs, len(work)) < 2 else _at_once
-    with _progress(len(work)) as advance:
+    with progress(len(work)) as advance:
         try:
             if len(work) == 1:  # the processes then share out the one recording
                 found = iter([check_one(*work[0], out_dir, settings, as_json, jobs=jobs, progress=advance)])
@@ -237,9 +237,14 @@ def _on_interrupt(stop: threading.Event) -> Iterator[None]:
 
 def _tell(outcome: Outcome) -> None:
     if outcome.error is not None:
-        print(outcome.error, file=sys.stderr, flush=True)  # by name, so that it passes above the bar
+        tell_error(outcome.error)
     else:
         print(outcome.line, flush=True)
+
+
+def tell_error(text: str) -> None:
+    """A line on stderr; by that name, so that it passes above the bar."""
+    print(text, file=sys.stderr, flush=True)
 
 
 def _close(result: Result, out_dir: Path) -> None:
@@ -259,7 +264,7 @@ def _close(result: Result, out_dir: Path) -> None:
 
 
 @contextmanager
-def _progress(n: int) -> Iterator[Callable[[float], None]]:
+def progress(n: int) -> Iterator[Callable[[float], None]]:
     """A bar on stderr if that is a terminal; it shows only once there is something to wait for.
 
     What it yields takes the share done, from 0 to 1.

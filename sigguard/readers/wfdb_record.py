@@ -44,7 +44,7 @@ def sniff(path: Path, head: bytes) -> int:
 
 
 @dataclass(frozen=True, slots=True)
-class _Piece:
+class Piece:
     """Frames first to last come from ``files`` (None: a gap), lead k from signal ``source[k]`` (-1: none)."""
 
     first: int
@@ -65,16 +65,19 @@ def open_wfdb(path: Path, options: ReadOptions) -> OpenRecording:
             found="a record of none (annotations only)",
             remedy="send the recording itself",
         )
+    return _assemble(header, *pieces_of(header), options)
+
+
+def pieces_of(header: Header) -> tuple[tuple[SignalLine, ...], list[Piece], list[Path]]:
+    """Signals, pieces in order of time, and files of a record, of one segment or of many."""
     if header.is_multi:
-        signals, pieces, files_used = _segments(header)
-    else:
-        files = SegmentFiles(header)
-        signals, files_used = header.signals, [path, *files.paths.values()]
-        pieces = [_Piece(0, files.n_frames, files, tuple(range(len(signals))))]
-    return _assemble(header, signals, pieces, files_used, options)
+        return _segments(header)
+    files = SegmentFiles(header)
+    everything = Piece(0, files.n_frames, files, tuple(range(len(header.signals))))
+    return header.signals, [everything], [header.path, *files.paths.values()]
 
 
-def _segments(header: Header) -> tuple[tuple[SignalLine, ...], list[_Piece], list[Path]]:
+def _segments(header: Header) -> tuple[tuple[SignalLine, ...], list[Piece], list[Path]]:
     """Signals, pieces and files of a record of many segments.
 
     The first segment of length 0 is the layout of a record whose signals may come and go; else
@@ -82,12 +85,12 @@ def _segments(header: Header) -> tuple[tuple[SignalLine, ...], list[_Piece], lis
     """
     layout: tuple[SignalLine, ...] | None = None
     opened: dict[str, SegmentFiles] = {}
-    pieces: list[_Piece] = []
+    pieces: list[Piece] = []
     used: list[Path] = [header.path]
     at = 0
     for number, (name, length) in enumerate(header.segments):
         if name == NULL_SEGMENT:
-            pieces.append(_Piece(at, at + length, None, ()))
+            pieces.append(Piece(at, at + length, None, ()))
             at += length
             continue
         if name not in opened:
@@ -98,14 +101,14 @@ def _segments(header: Header) -> tuple[tuple[SignalLine, ...], list[_Piece], lis
                 layout = tuple(without_samples(s) for s in segment.signals)
                 continue
             if segment.signals and all(s.fmt == 0 for s in segment.signals):  # another way to write a gap
-                pieces.append(_Piece(at, at + length, None, ()))
+                pieces.append(Piece(at, at + length, None, ()))
                 at += length
                 continue
             opened[name] = SegmentFiles(segment, min_frames=length)
             used += opened[name].paths.values()
         if length > opened[name].n_frames:
             raise _trouble(header, f"segment {name}", f"{length} samples", f"{opened[name].n_frames}")
-        pieces.append(_Piece(at, at + length, opened[name], ()))
+        pieces.append(Piece(at, at + length, opened[name], ()))
         at += length
     signals = layout if layout is not None else next((p.files.signals for p in pieces if p.files), ())
     if not signals or header.n_signals != len(signals):
@@ -127,7 +130,7 @@ def _segment_header(master: Header, path: Path) -> Header:
     return segment
 
 
-def _matched(header: Header, piece: _Piece, signals: tuple[SignalLine, ...], *, variable: bool) -> _Piece:
+def _matched(header: Header, piece: Piece, signals: tuple[SignalLine, ...], *, variable: bool) -> Piece:
     """The piece with its signals put to those of the whole: by name where the layout is variable."""
     if piece.files is None:
         return piece
@@ -160,10 +163,10 @@ def _matched(header: Header, piece: _Piece, signals: tuple[SignalLine, ...], *, 
         raise _trouble(
             header, f"segment {piece.files.header.path.stem}", "one rate for each signal", "another rate"
         )
-    return _Piece(piece.first, piece.last, piece.files, source)
+    return Piece(piece.first, piece.last, piece.files, source)
 
 
-def _check_gaps(header: Header, pieces: list[_Piece]) -> None:
+def _check_gaps(header: Header, pieces: list[Piece]) -> None:
     """A few lines of text can claim any length: it must be in proportion to what is stored."""
     total = pieces[-1].last if pieces else 0
     stored = sum(files.n_frames for files in {id(p.files): p.files for p in pieces if p.files}.values())
@@ -180,7 +183,7 @@ def _check_gaps(header: Header, pieces: list[_Piece]) -> None:
 def _assemble(
     header: Header,
     signals: tuple[SignalLine, ...],
-    pieces: list[_Piece],
+    pieces: list[Piece],
     files_used: list[Path],
     options: ReadOptions,
 ) -> OpenRecording:
@@ -197,8 +200,7 @@ def _assemble(
     )
     leads = normalise_leads([names[k] for k in chosen])
     picked = [
-        _Piece(p.first, p.last, p.files, tuple(p.source[k] for k in chosen) if p.files else ())
-        for p in pieces
+        Piece(p.first, p.last, p.files, tuple(p.source[k] for k in chosen) if p.files else ()) for p in pieces
     ]
     scales = _scales(picked, len(chosen), unit)
     assumed += _assumptions([signals[k] for k in chosen], leads, pieces, unit)
@@ -265,18 +267,18 @@ def _choose(
     return chosen, left_out
 
 
-def _all_scales(pieces: list[_Piece], lead: int, unit: str | None) -> list[DigitalScale]:
+def _all_scales(pieces: list[Piece], lead: int, unit: str | None) -> list[DigitalScale]:
     held = [(p.files, p.source[lead]) for p in pieces if p.files is not None and p.source[lead] >= 0]
     return [files.scale(channel, unit) for files, channel in dict.fromkeys(held)]
 
 
-def _scales(pieces: list[_Piece], n_leads: int, unit: str | None) -> tuple[DigitalScale, ...] | None:
+def _scales(pieces: list[Piece], n_leads: int, unit: str | None) -> tuple[DigitalScale, ...] | None:
     """One scale for each lead where it holds over all pieces, else None."""
     scales = [set(_all_scales(pieces, lead, unit)) for lead in range(n_leads)]
     return tuple(one.pop() for one in scales) if all(len(one) == 1 for one in scales) else None
 
 
-def _widest(pieces: list[_Piece], n_leads: int, unit: str | None) -> tuple[DigitalScale, ...]:
+def _widest(pieces: list[Piece], n_leads: int, unit: str | None) -> tuple[DigitalScale, ...]:
     """For each lead the scale of the coarsest step met; a lead met nowhere gets the default one."""
     default = DigitalScale(1.0 / DEFAULT_GAIN, 0.0, -(1 << 15) + 1, (1 << 15) - 1, -(1 << 15))
     return tuple(
@@ -286,7 +288,7 @@ def _widest(pieces: list[_Piece], n_leads: int, unit: str | None) -> tuple[Digit
 
 
 def _assumptions(
-    signals: list[SignalLine], leads: tuple[str, ...], pieces: list[_Piece], unit: str | None
+    signals: list[SignalLine], leads: tuple[str, ...], pieces: list[Piece], unit: str | None
 ) -> list[str]:
     """Plain sentences on gain, unit, name and length that the header does not state."""
     out = []
@@ -312,7 +314,7 @@ class OpenWfdb(OpenRecording):
     def __init__(
         self,
         info: RecordingInfo,
-        pieces: list[_Piece],
+        pieces: list[Piece],
         per_frame: int,
         unit: str | None,
         scales: tuple[DigitalScale, ...] | None,

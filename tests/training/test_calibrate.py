@@ -84,7 +84,9 @@ def test_promise_holds_for_the_worst_kind_of_noise() -> None:
         safe, blind = fit_bound(score, error, groups), fit_bound(score, error, groups[:0])
         fresh_score, fresh = drawn(rng, 4000)
         assert np.mean(3.0 * fresh <= safe(fresh_score)) >= EACH_KIND - 0.01  # what 900 rows of a kind allow
-        assert np.mean(3.0 * fresh <= blind(fresh_score)) < EACH_KIND - 0.01  # what it would be without the groups
+        assert (
+            np.mean(3.0 * fresh <= blind(fresh_score)) < EACH_KIND - 0.01
+        )  # what it would be without the groups
 
 
 def test_lost_values_push_the_bound_to_infinity_where_they_are_common() -> None:
