@@ -163,7 +163,7 @@ def reason(strips: Sequence[Strip], act: Act) -> str:
         rms_uv = max(
             1e3 * np.sqrt(s.powers.moving_mv2[k] + s.powers.drift_mv2[k]) for s in strips if s.powers
         )
-        return f"{target} carries {100 * power[k] / power.sum():.0f} % of the disturbance, {rms_uv:.0f} µV"
+        return f"{100 * power[k] / power.sum():.0f} % of what does harm comes from {target}, up to {rms_uv:.0f} µV"
     if action in COMPARED:
         hit = np.any([by_comparison.hit_rows(s.table, action) for s in strips], axis=0)
         what = {
