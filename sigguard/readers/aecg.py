@@ -298,7 +298,7 @@ def _lead(path: Path, name: str, value: Node, first: int, unit: str | None, assu
             _AGAIN,
         )
     origin_mv = 0.0
-    if origin is not None:
+    if origin is not None and origin.get("value"):
         origin_mv = _quantity(origin) * (mv_per_unit(origin.get("unit")) or per_unit)
         if not abs(origin_mv) < 1e12:
             raise trouble(path, f"origin of {name}", "a voltage", origin.get("value")[:40], _AGAIN)

@@ -21,7 +21,7 @@ from sigguard.readers import base
 from sigguard.readers.base import MAYBE, NO, YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
 from sigguard.readers.edf_annotations import Annotation, annotations_in, record_start
 from sigguard.readers.edf_header import BDF_MAGIC, EDF_MAGIC, EdfHeader, EdfSignal, read_header, trouble
-from sigguard.readers.signals import given_unit, is_ecg, mv_per_unit
+from sigguard.readers.signals import given_unit, is_ecg, is_scalp_beside, mv_per_unit
 from sigguard.recording import MAX_LEADS, RecordingInfo
 
 _BLOCK_BYTES = 4 << 20
@@ -101,7 +101,7 @@ def _choose(header: EdfHeader, names: list[str], unit: str | None) -> tuple[list
     for k, signal in enumerate(signals):
         if signal.is_annotation:
             why[k] = ""
-        elif not is_ecg(names[k], signal.unit or None):
+        elif not is_ecg(names[k], signal.unit or None) or is_scalp_beside(names[k], names):
             why[k] = names[k]
         elif not signal.unit and unit is None:
             why[k] = f"{names[k]} (no unit stated)"
@@ -151,7 +151,7 @@ def _runs(
     header: EdfHeader, per_record: int, fs_hz: float, assumed: list[str]
 ) -> tuple[float, tuple[_Run, ...]]:
     """When the first record began, s after the header's start time, and the records without gaps between."""
-    keeper = next((s for s in header.signals if s.is_annotation), None)
+    keeper = next((s for s in header.signals if s.is_annotation and header.plus), None)
     if not header.n_records or keeper is None:
         if header.discontinuous:
             raise trouble(header.path, "signals", "an annotation signal that keeps the time", "none")
@@ -261,7 +261,7 @@ class OpenEdf(OpenRecording):
 
     def annotations(self) -> list[Annotation]:
         """All annotations of an EDF+ or BDF+ file in the order stored; empty for the plain formats."""
-        signals = [s for s in self._header.signals if s.is_annotation and s.n_bytes]
+        signals = [s for s in self._header.signals if s.is_annotation and s.n_bytes and self._header.plus]
         out: list[Annotation] = []
         for _, block in _stored(self._header, 0, self._header.n_records if signals else 0):
             for row in block:

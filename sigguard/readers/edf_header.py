@@ -23,7 +23,7 @@ _WIDTHS = (16, 80, 8, 8, 8, 8, 8, 80, 8, 32)  # fields of a signal, all signals 
 _MONTHS = ("JAN", "FEB", "MAR", "APR", "MAY", "JUN", "JUL", "AUG", "SEP", "OCT", "NOV", "DEC")
 _WHOLE = re.compile(r"[+-]?[0-9]{1,15}")
 _DECIMAL = re.compile(r"[+-]?([0-9]+([.,][0-9]*)?|[.,][0-9]+)([eE][+-]?[0-9]+)?")
-_CORNER = r"\b{}\s*:\s*([0-9]+(?:[.,][0-9]+)?)\s*(?:Hz\b|(?=[\s,;]|$))"
+_CORNER = r"\b{}\s*:\s*([0-9]+(?:[.,][0-9]+)?)(?:\s*Hz\b|(?=\s+[A-Za-z]+\s*:|;|\s*$))"
 
 
 @dataclass(frozen=True, slots=True)
@@ -61,6 +61,11 @@ class EdfHeader:
     record_s: float
     record_bytes: int
     signals: tuple[EdfSignal, ...]
+
+    @property
+    def plus(self) -> bool:
+        """Whether the file is an EDF+ or BDF+, which keep times and annotations."""
+        return "+" in self.format
 
     @property
     def discontinuous(self) -> bool:
