@@ -6,16 +6,17 @@ limits are no numbers is an error, a signal that is no ECG is left out and named
 
 from __future__ import annotations
 
+import bisect
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
-from datetime import timedelta
+from datetime import datetime, timedelta
 from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
-from sigguard.errors import NoECGLead
+from sigguard.errors import NoECGLead, ReadError
 from sigguard.leads import clean_name, normalise_leads
 from sigguard.readers import base
 from sigguard.readers.base import MAYBE, NO, YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
@@ -211,13 +212,23 @@ def _stored(header: EdfHeader, first: int, last: int) -> Iterator[tuple[int, NDA
             file.seek(header.n_bytes + k * header.record_bytes)
             stored = file.read(n * header.record_bytes)
             if len(stored) < n * header.record_bytes:
-                raise trouble(
-                    header.path,
-                    "data records",
-                    f"{header.n_records}",
-                    "fewer: the file changed while it was read",
-                )
+                raise _changed(header)
             yield k, np.frombuffer(stored, dtype=np.uint8).reshape(n, header.record_bytes)
+
+
+def _part(header: EdfHeader, record: int, signal: EdfSignal, a: int, b: int) -> NDArray[np.int64]:
+    """Steps a to b of one signal in one data record."""
+    with header.path.open("rb") as file:
+        file.seek(header.n_bytes + record * header.record_bytes + signal.offset + a * header.width)
+        stored = file.read((b - a) * header.width)
+    if len(stored) < (b - a) * header.width:
+        raise _changed(header)
+    return _numbers(np.frombuffer(stored, dtype=np.uint8), header.width)
+
+
+def _changed(header: EdfHeader) -> ReadError:
+    found = "fewer: the file changed while it was read"
+    return trouble(header.path, "data records", f"{header.n_records}", found)
 
 
 def _numbers(stored: NDArray[np.uint8], width: int) -> NDArray[np.int64]:
@@ -230,7 +241,7 @@ def _numbers(stored: NDArray[np.uint8], width: int) -> NDArray[np.int64]:
     return (wide.view("<i4")[:, 0] >> 8).astype(np.int64)  # the shift brings the sign with it
 
 
-def _later(header: EdfHeader, zero_s: float):
+def _later(header: EdfHeader, zero_s: float) -> datetime | None:
     try:
         return None if header.start_time is None else header.start_time + timedelta(seconds=zero_s)
     except OverflowError:
@@ -258,6 +269,7 @@ class OpenEdf(OpenRecording):
         super().__init__(info, scales=scales, channels=channels, n_signals=len(header.signals))
         self._header, self._runs, self._zero_s = header, runs, zero_s
         self._signals = [header.signals[k] for k in channels]
+        self._ends = [run.sample + run.n_records * self._signals[0].per_record for run in runs]
 
     def annotations(self) -> list[Annotation]:
         """All annotations of an EDF+ or BDF+ file in the order stored; empty for the plain formats."""
@@ -273,20 +285,34 @@ class OpenEdf(OpenRecording):
     def _read_digits(self, start: int, stop: int) -> NDArray[np.int64]:
         missing = np.array([s.missing for s in self.scales or ()], dtype=np.int64)
         out = np.repeat(missing[:, np.newaxis], stop - start, axis=1)
-        per_record = self._signals[0].per_record
-        for run in self._runs:
-            begin, end = max(start, run.sample), min(stop, run.sample + run.n_records * per_record)
+        for first in range(bisect.bisect_right(self._ends, start), len(self._runs)):
+            run = self._runs[first]
+            begin, end = max(start, run.sample), min(stop, self._ends[first])
             if begin >= end:
-                continue
-            first = run.record + (begin - run.sample) // per_record
-            last = run.record - (run.sample - end) // per_record
-            for record, block in _stored(self._header, first, last):
-                at = run.sample + (record - run.record) * per_record
-                a, b = max(begin, at), min(end, at + len(block) * per_record)
-                for row, s in zip(out, self._signals, strict=True):
-                    steps = _numbers(block[:, s.offset : s.offset + s.n_bytes], self._header.width)
-                    row[a - start : b - start] = steps[a - at : b - at]
+                break
+            for at, steps in self._pieces(run, begin, end):
+                out[:, at - start : at - start + steps.shape[1]] = steps
         return out
+
+    def _pieces(self, run: _Run, begin: int, end: int) -> Iterator[tuple[int, NDArray[np.int64]]]:
+        """(sample at which it begins, steps (n_leads, n)) of all that a run holds between two samples."""
+        header, per_record = self._header, self._signals[0].per_record
+        first = run.record + (begin - run.sample) // per_record
+        last = run.record - (run.sample - end) // per_record
+        if header.record_bytes > _BLOCK_BYTES:  # more than the format advises: only what is asked for
+            for record in range(first, last):
+                at = run.sample + (record - run.record) * per_record
+                a, b = max(begin, at), min(end, at + per_record)
+                yield a, np.stack([_part(header, record, s, a - at, b - at) for s in self._signals])
+            return
+        for record, block in _stored(header, first, last):
+            at = run.sample + (record - run.record) * per_record
+            a, b = max(begin, at), min(end, at + len(block) * per_record)
+            rows = [
+                _numbers(block[:, s.offset : s.offset + s.n_bytes], header.width)[a - at : b - at]
+                for s in self._signals
+            ]
+            yield a, np.stack(rows)
 
 
 READER = Reader("EDF", sniff, open_edf)

@@ -93,6 +93,9 @@ def read_header(path: Path) -> EdfHeader:
         table = file.read(n_bytes - _FIXED)
     kind, width = ("EDF", 2) if fixed[:8] == EDF_MAGIC else ("BDF", 3)
     reserved = fixed[192:197].decode("latin-1")
+    if reserved[:3] in ("EDF", "BDF", "24B") and (reserved[:3] == "EDF") != (kind == "EDF"):
+        other = "BDF" if kind == "EDF" else "EDF"
+        raise trouble(path, "reserved field", f"the mark of an {kind} file", f"that of a {other} file")
     plus = reserved[3:] if reserved in (f"{kind}+C", f"{kind}+D") else ""
     signals = _signals(path, table, n_signals, width)
     record_bytes = sum(s.n_bytes for s in signals)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import time
 from datetime import datetime
 from pathlib import Path
 
@@ -287,3 +288,38 @@ def test_annotation_lists_by_the_book():
     ]
     for junk in (b"", b"\0\0", b"180\x14\x14\0", b"+1e9\x14\x14", b"+" + b"9" * 500 + b"\x14", b"\x14\x14"):
         assert record_start(junk) is None and annotations_in(junk, zero_s=0.0, keeps_time=True) == []
+
+
+def test_headers_of_the_other_width(tmp_path: Path):
+    for bits, mark in ((16, "24BIT"), (16, "BDF+C"), (24, "EDF+C")):
+        path = spoilt(made.edf_file(tmp_path / "a.edf", [ecg(bits=bits)], bits=bits), 192, mark, 44)
+        assert "reserved field" in refused(path)
+    path = made.edf_file(tmp_path / "a.edf", [ecg(bits=16)])
+    path.write_bytes(b"\xffBIOSEMI" + path.read_bytes()[8:])
+    assert "cut short" in refused(path)
+
+
+def test_records_longer_than_a_block(tmp_path: Path, monkeypatch: pytest.MonkeyPatch):
+    """A whole recording in one data record: windows are read without the rest of it."""
+    signals = [ecg(6000), ecg(6000, label="ECG V1", steps=made.digits(2, 6000, 16)[1])]
+    for kind in ("", "+D"):
+        path = made.edf_file(tmp_path / "a.edf", signals, record_s=4, kind=kind, starts_s=[0, 5, 9])
+        whole = read_recording(path).signal_mv
+        monkeypatch.setattr("sigguard.readers.edf._BLOCK_BYTES", 100)
+        with open_recording(path) as opened:
+            np.testing.assert_array_equal(opened.read(), whole)
+            np.testing.assert_array_equal(opened.read(1999, 4600), whole[:, 1999:4600])
+        monkeypatch.undo()
+
+
+def test_many_gaps_take_no_long_time(tmp_path: Path):
+    """20 000 records with a gap after each, 400 windows: what a window costs must not grow with their number."""
+    n = 20_000
+    starts = [0.02 * k for k in range(n)]
+    path = made.edf_file(tmp_path / "a.edf", [ecg(5 * n)], record_s=0.01, kind="+D", starts_s=starts)
+    began = time.process_time()
+    with open_recording(path, with_sha256=False) as opened:
+        assert opened.info.n_samples == 10 * n - 5
+        for k in range(400):
+            assert np.isnan(opened.read(k * 400, k * 400 + 50)).sum() == 25
+    assert time.process_time() - began < 5.0
