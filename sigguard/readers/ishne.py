@@ -25,6 +25,7 @@ MAGIC, ANNOTATION_MAGIC = b"ISHNE1.0", b"ANN  1.0"
 _FIXED_FROM, _VARIABLE_FROM = 10, 522
 MAX_STORED_LEADS = 12
 MISSING = -32768
+_TOLD_BY_S = 60  # so much of a recording tells whether its limb leads are augmented
 NV_PER_MV = 1e6
 _AUGMENTED = {8: "aVR", 9: "aVL", 10: "aVF"}
 _LEADS = {
@@ -68,7 +69,9 @@ def open_ishne(path: Path, options: ReadOptions) -> OpenRecording:
     n_samples = _length(path, header, assumed)
     fs_hz = base.check_rate(header.fs_hz, str(path), "sampling rate")
     assumed += base.stated_rate_wins(fs_hz, options.fs_hz)
-    names = [_LEADS.get(code, f"lead {k + 1}") for k, code in enumerate(header.codes)]
+    augmented = _augmented(path, header, n_samples)
+    plain = {code: name[1:] for code, name in _AUGMENTED.items()} if augmented is False else {}
+    names = [plain.get(code) or _LEADS.get(code, f"lead {k + 1}") for k, code in enumerate(header.codes)]
     chosen = [k for k in range(header.n_leads) if header.nv_per_step[k]]
     left_out = tuple(f"{names[k]} (no resolution stated)" for k in range(header.n_leads) if k not in chosen)
     if not chosen:
@@ -81,7 +84,7 @@ def open_ishne(path: Path, options: ReadOptions) -> OpenRecording:
             remedy="export the recording again",
         )
     leads = normalise_leads([names[k] for k in chosen])
-    assumed += _assumptions(header, chosen, leads)
+    assumed += _assumptions(header, chosen, leads, augmented)
     half = 1 << 15
     scales = tuple(
         DigitalScale(header.nv_per_step[k] / NV_PER_MV, 0.0, -half + 1, half - 1, MISSING) for k in chosen
@@ -160,10 +163,47 @@ def _length(path: Path, header: _Header, assumed: list[str]) -> int:
     raise _error(path, "samples", f"{stated} of each lead, as the header says", f"{held}", _CUT)
 
 
-def _assumptions(header: _Header, chosen: list[int], leads: tuple[str, ...]) -> list[str]:
+def _augmented(path: Path, header: _Header, n_samples: int) -> bool | None:
+    """Whether the lead coded VR is aVR = -(I + II) / 2 (True) or VR, two thirds of it (False), by its samples.
+
+    None where the leads are not there to tell, or agree with neither.
+    """
+    if not {5, 6, 8} <= {*header.codes}:
+        return None
+    n = min(n_samples, _TOLD_BY_S * header.fs_hz)
+    frames = _frames(path, header, 0, n)[:, [header.codes.index(code) for code in (5, 6, 8)]]
+    steps = np.array([header.nv_per_step[header.codes.index(code)] for code in (5, 6, 8)])
+    one, two, right = (frames[(frames != MISSING).all(axis=1)] * (steps / NV_PER_MV)).T
+    both = one + two
+    power = float(both @ both)
+    if not power:
+        return None
+    share = -float(both @ right) / power
+    rest = right + share * both
+    if float(rest @ rest) > 0.05 * float(right @ right):  # no multiple of it at all
+        return None
+    return True if abs(share - 1 / 2) < 0.05 else False if abs(share - 1 / 3) < 0.05 else None
+
+
+def _frames(path: Path, header: _Header, start: int, stop: int) -> NDArray[np.int16]:
+    """Samples start to stop of all leads as (n, n_leads)."""
+    size = 2 * header.n_leads
+    with path.open("rb") as file:
+        file.seek(header.samples_from + size * start)
+        stored = file.read(size * (stop - start))
+    if len(stored) < size * (stop - start):
+        found = "fewer: the file changed while it was read"
+        raise _error(path, "samples", f"those up to {stop}", found)
+    return np.frombuffer(stored, dtype="<i2").reshape(-1, header.n_leads)
+
+
+def _assumptions(
+    header: _Header, chosen: list[int], leads: tuple[str, ...], augmented: bool | None
+) -> list[str]:
     out = []
     pairs = list(zip(chosen, leads, strict=True))
-    if which := [lead for k, lead in pairs if header.codes[k] in _AUGMENTED]:
+    which = [lead for k, lead in pairs if header.codes[k] in _AUGMENTED]
+    if which and augmented is None:
         out.append(f"{', '.join(which)} taken as augmented leads; the format does not say so.")
     if which := [lead for k, lead in pairs if header.codes[k] not in _LEADS]:
         out.append(f"The file does not say which lead {', '.join(which)} is; taken for an ECG lead.")
@@ -217,14 +257,7 @@ class OpenIshne(OpenRecording):
         self._path, self._header = path, header
 
     def _read_digits(self, start: int, stop: int) -> NDArray[np.int64]:
-        n_leads = self._header.n_leads
-        with self._path.open("rb") as file:
-            file.seek(self._header.samples_from + 2 * n_leads * start)
-            stored = file.read(2 * n_leads * (stop - start))
-        if len(stored) < 2 * n_leads * (stop - start):
-            found = "fewer: the file changed while it was read"
-            raise _error(self._path, "samples", f"{self.info.n_samples} of each lead", found)
-        frames = np.frombuffer(stored, dtype="<i2").reshape(-1, n_leads)
+        frames = _frames(self._path, self._header, start, stop)
         return frames.T[list(self.channels)].astype(np.int64)
 
 

@@ -141,3 +141,15 @@ def test_scp_is_recognised_and_refused(marked: bool, tmp_path: Path):
     if marked:  # a recording that was not checked is reported, not passed over
         made.wfdb_record(tmp_path, made.digits(1, 100, 16))
         assert path in find_recordings(tmp_path)
+
+
+@pytest.mark.parametrize(("share", "name", "said"), [(1 / 2, "aVR", 0), (1 / 3, "VR", 0), (0.8, "aVR", 1)])
+def test_augmented_or_not_is_told_by_the_limb_leads(share: float, name: str, said: int, tmp_path: Path):
+    """Goldberger's aVR is -(I + II) / 2; Wilson's VR two thirds of that. The format has one code for both."""
+    one, two = made.digits(2, 1000, 12)
+    d = np.stack([one, two, np.rint(-share * (one + two) * 0.5).astype(int)])
+    path = made.ishne_file(tmp_path / "a.ecg", d, codes=[5, 6, 8], nv=[1000, 1000, 2000])
+    info = open_recording(path).info
+    assert info.leads == ("I", "II", name) and len(info.assumed) == said
+    d[2] = made.digits(1, 1000, 12, seed=9)[0]  # nothing to do with the others
+    assert "augmented" in open_recording(made.ishne_file(path, d, codes=[5, 6, 8])).info.assumed[0]
