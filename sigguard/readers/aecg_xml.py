@@ -6,6 +6,7 @@ depth, so that a document costs no more memory than a few times its size.
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -22,6 +23,7 @@ MAX_BYTES = 512 << 20
 MAX_ELEMENTS, MAX_DEPTH = 200_000, 100
 _CHUNK = 4 << 20
 _DIGIT_BLOCK = 1 << 20  # characters turned into numbers at a time
+_LONGEST_NUMBER = 100
 _SKIPPED = frozenset(("annotationSet", "derivation", "text"))  # nothing in them is a recorded sample
 _TEXTS = frozenset(("digits", "name", "family", "given"))  # elements whose characters count
 
@@ -147,18 +149,26 @@ def whole_numbers(node: Node) -> NDArray[np.int64]:
     text = "".join(node.pieces)
     for at in range(0, len(text), _DIGIT_BLOCK):
         block = rest + text[at : at + _DIGIT_BLOCK]
-        words = block.split()
-        rest = ""
-        if at + _DIGIT_BLOCK < len(text) and words and not block[-1].isspace():
-            rest = words.pop()
-        parts.append(_whole(words))
-    if rest:
-        parts.append(_whole([rest]))
+        cut = (
+            max(block.rfind(blank) for blank in " \n\t\r") + 1
+            if at + _DIGIT_BLOCK < len(text)
+            else len(block)
+        )
+        block, rest = block[:cut], block[cut:]
+        if len(rest) > _LONGEST_NUMBER:
+            raise ValueError(f"a number of more than {_LONGEST_NUMBER} characters")
+        if block.strip():
+            parts.append(_whole(block))
     return np.concatenate(parts) if parts else np.empty(0, dtype=np.int64)
 
 
-def _whole(words: list[str]) -> NDArray[np.int64]:
-    values = np.array(words, dtype=np.float64)  # decimals such as "12.0" are met
+def _whole(text: str) -> NDArray[np.int64]:
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("error")  # numpy warns where the text holds something else than numbers
+            values = np.fromstring(text, dtype=np.float64, sep=" ")  # decimals such as "12.0" are met
+    except DeprecationWarning as err:
+        raise ValueError("something else between the numbers") from err
     if not (np.isfinite(values).all() and (np.abs(values) < 2**31).all()):
         raise ValueError("a number that no converter gives")
     out = values.astype(np.int64)

@@ -220,3 +220,6 @@ def test_numbers_over_the_seams_of_blocks(monkeypatch: pytest.MonkeyPatch):
     for separator in (" ", "\n", " \n\t "):
         np.testing.assert_array_equal(whole_numbers(Node("digits", {}, [], [separator.join(map(str, x))])), x)
     assert whole_numbers(Node("digits", {}, [], [" \n "])).size == 0
+    for junk in ("1 2 3x 4 5 6", "1" * 500, "1,2,3,4,5,6,7", "0x10 12 13 14", "1_000 17 18"):
+        with pytest.raises(ValueError):
+            whole_numbers(Node("digits", {}, [], [junk]))
