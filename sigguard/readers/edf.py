@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import bisect
 import math
+import re
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import datetime, timedelta
@@ -17,7 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.errors import NoECGLead, ReadError
-from sigguard.leads import clean_name, normalise_leads
+from sigguard.leads import LEAD_OF_CODE, clean_name, normalise_lead, normalise_leads
 from sigguard.readers import base
 from sigguard.readers.base import MAYBE, NO, YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
 from sigguard.readers.edf_annotations import Annotation, annotations_in, record_start
@@ -26,6 +27,9 @@ from sigguard.readers.signals import given_unit, is_ecg, is_scalp_beside, mv_per
 from sigguard.recording import MAX_LEADS, RecordingInfo
 
 _BLOCK_BYTES = 4 << 20
+# the format wants the kind of a signal before its name: where ECG is marked so, other voltages are something else
+_MARKED = re.compile(r"(ecg|ekg)", re.IGNORECASE)
+_KNOWN = {*LEAD_OF_CODE.values(), "MLI", "MLII", "MLIII"}
 _OVERLAP = 0.01  # of a record, by which rounded times may make it begin before the last one ended
 
 
@@ -99,11 +103,14 @@ def _choose(header: EdfHeader, names: list[str], unit: str | None) -> tuple[list
     """Numbers of the ECG leads of the highest rate, and in words what is left out."""
     signals = header.signals
     why: dict[int, str] = {}
+    marked = any(_MARKED.match(name) for name in names)
     for k, signal in enumerate(signals):
         if signal.is_annotation:
             why[k] = ""
         elif not is_ecg(names[k], signal.unit or None) or is_scalp_beside(names[k], names):
             why[k] = names[k]
+        elif marked and not _MARKED.match(names[k]) and normalise_lead(names[k]) not in _KNOWN:
+            why[k] = f"{names[k]} (not marked as ECG)"
         elif not signal.unit and unit is None:
             why[k] = f"{names[k]} (no unit stated)"
         elif not signal.per_record:

@@ -199,6 +199,17 @@ def test_what_is_no_ecg_or_slower_is_left_out_and_named(tmp_path: Path):
         read_recording(made.edf_file(tmp_path / "b.edf", [ecg(label="SaO2", unit="%")]))
 
 
+def test_where_ecg_is_marked_other_voltages_are_something_else(tmp_path: Path):
+    """As in sleep recordings, where legs and chin are voltages too; names of leads need no mark."""
+    labels = ["ECG II", "Leg L", "Chin1-Chin2", "V5", "EKG2"]
+    signals = [ecg(label=label) for label in labels]
+    info = open_recording(made.edf_file(tmp_path / "a.edf", signals)).info
+    assert info.leads == ("II", "V5", "EKG2")
+    assert info.left_out == ("Leg L (not marked as ECG)", "Chin1-Chin2 (not marked as ECG)")
+    unmarked = made.edf_file(tmp_path / "b.edf", signals[1:4])
+    assert open_recording(unmarked).info.n_leads == 3
+
+
 def test_corners_and_identity(tmp_path: Path):
     signals = [ecg(prefilter="HP: 0.05Hz LP:150Hz N:50Hz"), ecg(label="ECG I", prefilter="HP:DC LP:0,5 kHz")]
     path = made.edf_file(tmp_path / "a.edf", signals, patient="S-17 F 07-JUN-1950 Some_Body")
