@@ -7,6 +7,7 @@ from datetime import datetime
 from pathlib import Path
 
 import numpy as np
+import pyedflib
 import pytest
 
 from readers import made
@@ -14,7 +15,6 @@ from sigguard.errors import NoECGLead, ReadError
 from sigguard.readers import open_recording, read_recording
 from sigguard.readers.edf_annotations import annotations_in, record_start
 
-pyedflib = pytest.importorskip("pyedflib")
 THEIRS = Path(pyedflib.__file__).parent / "tests" / "data"
 
 
