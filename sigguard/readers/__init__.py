@@ -10,7 +10,7 @@ from collections.abc import Iterable
 from pathlib import Path
 
 from sigguard.errors import ReadError
-from sigguard.readers import base, csv_table, dicom, wfdb_record
+from sigguard.readers import aecg, base, csv_table, dicom, edf, ishne, scp, wfdb_record
 from sigguard.readers.base import YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
 from sigguard.readers.find import locate, search
 from sigguard.readers.signals import given_unit
@@ -27,7 +27,15 @@ __all__ = [
 ]
 
 # asked in this order; the first to be sure gets the file
-READERS: tuple[Reader, ...] = (dicom.READER, wfdb_record.READER, csv_table.READER)
+READERS: tuple[Reader, ...] = (
+    dicom.READER,
+    edf.READER,
+    ishne.READER,
+    aecg.READER,
+    scp.READER,
+    wfdb_record.READER,
+    csv_table.READER,
+)
 
 
 def open_recording(
@@ -67,7 +75,7 @@ def open_recording(
     answers = [(reader.sniff(file, head), reader) for reader in READERS]
     level, reader = max(answers, key=lambda answer: answer[0])
     if level == base.NO:
-        known = ", ".join(reader.format for reader in READERS)
+        known = ", ".join(reader.format for reader in READERS if reader is not scp.READER)
         raise read_error(
             str(file),
             where="start of file",

@@ -20,6 +20,8 @@ from sigguard.recording import MAX_FS_HZ, MIN_FS_HZ, RecordingInfo
 
 HEAD_BYTES = 16_384
 MAX_PART = 200  # characters of one part of an error message
+# gaps, and pieces used again, may last this many times what is stored, and this many seconds beside
+GAP_LIMIT = 20, 3600.0
 NO, MAYBE, YES = 0, 1, 2  # what a sniffer says: not mine, mine to explain if nobody else claims it, mine
 
 

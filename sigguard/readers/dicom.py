@@ -20,6 +20,7 @@ from sigguard.errors import NoECGLead, ReadError, SigguardError
 from sigguard.leads import LEAD_OF_CODE, clean_name, normalise_leads
 from sigguard.readers import base
 from sigguard.readers.base import MAYBE, NO, YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
+from sigguard.readers.held import OpenHeld
 from sigguard.readers.signals import given_unit, is_ecg, mv_per_unit
 from sigguard.recording import MAX_LEADS, RecordingInfo
 
@@ -185,7 +186,7 @@ def _opened(
         left_out=tuple(left_out),
         identity=_identity(data) if options.with_identity else (),
     )
-    return OpenDicom(info, channels, scales=scales, channels=numbers, n_signals=n_signals)
+    return OpenHeld(info, channels, channels=numbers, n_signals=n_signals)
 
 
 def _originals(path: Path, data: Any, assumed: list[str]) -> list[tuple[int, Any]]:
@@ -384,23 +385,6 @@ def _number(value: Any, default: float) -> float:
 
 def _several(value: Any) -> list[Any]:
     return [] if value is None else [value] if isinstance(value, str) else list(value)
-
-
-class OpenDicom(OpenRecording):
-    """An open DICOM waveform object; see OpenRecording."""
-
-    def __init__(self, info: RecordingInfo, parts: list[_Channel], **facts: Any) -> None:
-        super().__init__(info, **facts)
-        self._parts = parts
-
-    def _read_digits(self, start: int, stop: int) -> NDArray[np.int64]:
-        out = np.empty((len(self._parts), stop - start), dtype=np.int64)
-        for row, part in zip(out, self._parts, strict=True):
-            row[:] = part.scale.missing
-            begin, end = max(start, part.first), min(stop, part.first + len(part.steps))
-            if begin < end:
-                row[begin - start : end - start] = part.steps[begin - part.first : end - part.first]
-        return out
 
 
 def _error(

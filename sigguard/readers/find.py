@@ -11,7 +11,12 @@ from sigguard.readers.base import HEAD_BYTES, read_head
 from sigguard.readers.wfdb_header import looks_like_header, read_header
 
 MAX_HEADERS_TRIED = 10_000
-_SUSPECT = (".hea", ".dcm")  # called a recording but not one: reported in a folder, not passed over
+_SUSPECT = (
+    ".hea",
+    ".dcm",
+    ".edf",
+    ".bdf",
+)  # called a recording but not one: reported in a folder, not passed over
 
 
 def locate(path: Path) -> Path:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 import unicodedata
+from collections.abc import Sequence
 
 from sigguard.errors import UsageError
 
@@ -25,7 +26,11 @@ _OTHER = re.compile(
     r"([\s_\-#:(\[].*)?$",
     re.IGNORECASE,
 )
-_EEG = re.compile(r"^(fp?[12z]|[cfopt][34z]|o[12]|t[3-6]|f[78])[-:](a[12]|m[12]|ref|cz)$", re.IGNORECASE)
+_EEG = re.compile(
+    r"^((fp?[12z]|[cfopt][34z]|o[12]|t[3-6]|f[78])[-:](a[12]|m[12]|ref|cz)|fp[12z]|f[3478z]|[cpo]z|o[12])$",
+    re.IGNORECASE,
+)
+_EEG_OR_CHEST = re.compile(r"^[ca][1-4]$", re.IGNORECASE)
 
 
 def mv_per_unit(unit: str) -> float | None:
@@ -50,3 +55,10 @@ def is_ecg(name: str, unit: str | None) -> bool:
         return False
     bare = name.strip()
     return not (_OTHER.match(bare) or _EEG.match(bare))
+
+
+def is_scalp_beside(name: str, names: Sequence[str]) -> bool:
+    """Whether a name that scalp and chest electrodes share (``C3``) means the scalp, by the signals beside it."""
+    return bool(_EEG_OR_CHEST.match(name.strip())) and any(
+        _EEG.match(other.strip()) or other.casefold().startswith("eeg") for other in names
+    )

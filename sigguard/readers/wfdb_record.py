@@ -32,9 +32,6 @@ from sigguard.readers.wfdb_header import (
 )
 from sigguard.recording import MAX_LEADS, RecordingInfo
 
-# gaps and segments used again may last this many times what is stored, and this many seconds beside
-GAP_LIMIT = 20, 3600.0
-
 
 def sniff(path: Path, head: bytes) -> int:
     """A header by its first lines; whatever is merely called one may be explained here."""
@@ -170,7 +167,7 @@ def _check_gaps(header: Header, pieces: list[Piece]) -> None:
     """A few lines of text can claim any length: it must be in proportion to what is stored."""
     total = pieces[-1].last if pieces else 0
     stored = sum(files.n_frames for files in {id(p.files): p.files for p in pieces if p.files}.values())
-    factor, spare_s = GAP_LIMIT
+    factor, spare_s = base.GAP_LIMIT
     if total - stored > factor * stored + spare_s * (header.fs_hz or DEFAULT_FS_HZ):
         raise _trouble(
             header,

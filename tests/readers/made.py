@@ -176,3 +176,168 @@ def csv_text(
         fields = ["" if np.isnan(v) else f"{v:.4f}" for v in values]
         rows.append(separator.join([f"{k / fs_hz:.4f}", *fields]))
     return "\n".join(rows) + "\n"
+
+
+def field(value: object, width: int, encoding: str = "latin-1") -> bytes:
+    """A header field of EDF: characters, padded with blanks."""
+    raw = str(value).encode(encoding)
+    assert len(raw) <= width, value
+    return raw.ljust(width)
+
+
+def edf_file(
+    path: Path,
+    signals: list[dict],
+    *,
+    record_s: float = 1.0,
+    bits: int = 16,
+    kind: str = "",
+    starts_s: list[float] | None = None,
+    texts: dict[int, bytes] | None = None,
+    n_stated: int | None = None,
+    start: str = "02.01.2003.04.05",
+    patient: str = "X X X X",
+    recording: str = "X",
+    encoding: str = "latin-1",
+) -> Path:
+    """An EDF (``bits`` 16) or BDF (24) file; of each signal its steps and what differs from the usual.
+
+    ``kind`` is ``+C`` or ``+D``: an annotation signal is then put behind the others; ``starts_s`` says when each
+    record begins, ``texts`` holds further annotation lists of a record, by its number.
+    """
+    magic, name = (b"0       ", "EDF") if bits == 16 else (b"\xffBIOSEMI", "BDF")
+    half = 1 << (bits - 1)
+    usual = {"unit": "uV", "physical": (-half, half - 1), "digital": (-half, half - 1), "prefilter": ""}
+    table = [usual | s for s in signals]
+    counts = [round(s.get("fs_hz", 500) * record_s) for s in table]
+    n_records = len(table[0]["steps"]) // counts[0]
+    if kind:
+        notes = {"label": f"{name} Annotations", "unit": "", "physical": (-1, 1), "steps": None}
+        table.append(usual | notes)
+        counts.append(120 // (bits // 8))
+    columns = [
+        [field(s["label"], 16, encoding) for s in table],
+        [field("", 80) for _ in table],
+        [field(s["unit"], 8, encoding) for s in table],
+        [field(s["physical"][0], 8) for s in table],
+        [field(s["physical"][1], 8) for s in table],
+        [field(s["digital"][0], 8) for s in table],
+        [field(s["digital"][1], 8) for s in table],
+        [field(s["prefilter"], 80) for s in table],
+        [field(n, 8) for n in counts],
+        [field("", 32) for _ in table],
+    ]
+    head = [magic, field(patient, 80), field(recording, 80), field(start, 16)]
+    head += [field(256 * (len(table) + 1), 8), field(f"{name}{kind}" if kind else "", 44)]
+    head += [field(n_records if n_stated is None else n_stated, 8), field(f"{record_s:g}", 8)]
+    head += [field(len(table), 4)]
+    body = []
+    for r in range(n_records):
+        for s, n in zip(table, counts, strict=True):
+            if s["steps"] is None:
+                at = r * record_s if starts_s is None else starts_s[r]
+                lists = b"%+.6f\x14\x14\0" % at + (texts or {}).get(r, b"")
+                body.append(lists.ljust(n * bits // 8, b"\0"))
+            else:
+                body.append(encode(np.asarray(s["steps"])[r * n : (r + 1) * n], bits))
+    path.write_bytes(b"".join(head) + b"".join(b"".join(c) for c in columns) + b"".join(body))
+    return path
+
+
+def crc_ccitt(data: bytes) -> int:
+    """CCITT polynomial 0x1021 from 0xFFFF, bit by bit."""
+    crc = 0xFFFF
+    for byte in data:
+        crc ^= byte << 8
+        for _ in range(8):
+            crc = ((crc << 1) ^ 0x1021 if crc & 0x8000 else crc << 1) & 0xFFFF
+    return crc
+
+
+def ishne_file(
+    path: Path,
+    d: np.ndarray,
+    *,
+    codes: list[int],
+    nv: list[int] | int = 1000,
+    fs_hz: int = 500,
+    note: bytes = b"",
+    n_stated: int | None = None,
+    date: tuple[int, int, int] = (2, 1, 2020),
+    time: tuple[int, int, int] = (3, 4, 5),
+    crc: int | None = None,
+) -> Path:
+    """A Holter file of (n_leads, n) steps."""
+    n_leads, n = d.shape
+    steps = [nv] * n_leads if isinstance(nv, int) else nv
+    slots = {158: (codes, "<i2"), 182: ([1] * n_leads, "<i2"), 206: (steps, "<u2")}
+    fixed = bytearray(522)
+    counts = np.array([len(note), n if n_stated is None else n_stated, 522, 522 + len(note)], dtype="<i4")
+    fixed[10:26] = counts.tobytes()
+    fixed[28:36], fixed[68:75], fixed[108:112] = b"Somebody", b"Unnamed", b"S-17"
+    for at, values in ((128, (2, 1, 7, 6, 1950)), (138, date), (144, date), (150, time), (156, (n_leads,))):
+        fixed[at : at + 2 * len(values)] = np.array(values, dtype="<i2").tobytes()
+    for at, (values, dtype) in slots.items():
+        fill = 0 if at == 206 else -9
+        fixed[at : at + 24] = np.array([*values, *[fill] * (12 - n_leads)]).astype(dtype).tobytes()
+    fixed[272:274] = np.array([fs_hz], dtype="<u2").tobytes()
+    checked = bytes(fixed[10:]) + note
+    fixed[:10] = b"ISHNE1.0" + int(crc_ccitt(checked) if crc is None else crc).to_bytes(2, "little")
+    path.write_bytes(bytes(fixed) + note + d.T.astype("<i2").tobytes())
+    return path
+
+
+_XSI = 'xmlns:xsi="http://www.w3.org/2001/XMLSchema-instance"'
+SUBJECT = (
+    "<componentOf><timepointEvent><componentOf><subjectAssignment><subject><trialSubject>"
+    '<id root="1.2.3" extension="S-17"/><subjectDemographicPerson><name><given>Some</given>'
+    '<family>Body</family></name><administrativeGenderCode code="F"/><birthTime value="19500607"/>'
+    "</subjectDemographicPerson></trialSubject></subject></subjectAssignment></componentOf></timepointEvent>"
+    "</componentOf>"
+)
+
+
+def aecg_set(
+    d: np.ndarray,
+    leads: list[str],
+    *,
+    head: str = '<head value="20200102030405.250"/>',
+    time: str = "TIME_ABSOLUTE",
+    increment: str = 'value="0.002" unit="s"',
+    origin: str = 'value="0" unit="uV"',
+    scale: str = 'value="1" unit="uV"',
+) -> str:
+    """A sequence set of (n_leads, n) steps: its time, then each lead."""
+    kind = "GLIST_TS" if time == "TIME_ABSOLUTE" else "GLIST_PQ"
+    out = [
+        f'<component><sequenceSet><component><sequence><code code="{time}" codeSystem="2.16.840.1.113883.5.4"/>'
+        f'<value xsi:type="{kind}">{head}<increment {increment}/></value></sequence></component>'
+    ]
+    for lead, x in zip(leads, d, strict=True):
+        text = "\n".join(" ".join(map(str, x[k : k + 20])) for k in range(0, len(x), 20))
+        out.append(
+            f'<component><sequence><code code="MDC_ECG_LEAD_{lead.upper()}" codeSystem="2.16.840.1.113883.6.24"/>'
+            f'<value xsi:type="SLIST_PQ"><origin {origin}/><scale {scale}/><digits>{text}</digits></value>'
+            "</sequence></component>"
+        )
+    return "".join(out) + "</sequenceSet></component>"
+
+
+def aecg_file(
+    path: Path,
+    sets: list[str],
+    *,
+    code: str = "RHYTHM",
+    extra: str = "",
+    more: str = "",
+    encoding: str = "utf-8",
+    before: str = "",
+) -> Path:
+    """A document of one series of sets; ``extra`` stands within the series, ``more`` behind it."""
+    text = (
+        f'<?xml version="1.0" encoding="{encoding}"?>{before}<AnnotatedECG xmlns="urn:hl7-org:v3" {_XSI}>'
+        f'<id root="1.2"/><code code="93000"/>{SUBJECT}<component><series><code code="{code}"/>'
+        f"{''.join(sets)}{extra}</series></component>{more}</AnnotatedECG>"
+    )
+    path.write_bytes(text.encode(encoding))
+    return path

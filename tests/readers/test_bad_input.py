@@ -165,7 +165,7 @@ def test_segments_outside_or_nested_or_missing(segment: str, tmp_path: Path):
     sentence(tmp_path / "all.hea")
 
 
-@pytest.mark.parametrize("name", ["rec.hea", "rec.dcm", "rec.csv", "rec"])
+@pytest.mark.parametrize("name", ["rec.hea", "rec.dcm", "rec.csv", "rec.edf", "rec.xml", "rec"])
 @pytest.mark.parametrize(
     "content", [b"", b"\0" * 5000, bytes(range(256)) * 20, b"\x89PNG\r\n\x1a\n" + b"\1\2" * 99]
 )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -79,6 +80,43 @@ def _csv(folder: Path) -> Path:
     return folder / "a.csv"
 
 
+def _edf(folder: Path, **kind) -> Path:
+    """Two leads of 500 Hz, one of them upside down and in mV, one slower, a breathing signal between."""
+    bits = kind.get("bits", 16)
+    half = 1 << (bits - 1)
+    one, two, chest = made.digits(3, 1000, bits)
+    signals = [
+        {"label": "ECG I", "steps": one, "physical": (-3276.8, 3276.7), "prefilter": "HP:0.05Hz LP:150Hz"},
+        {"label": "Resp", "steps": chest[:50], "unit": "Ohm", "fs_hz": 25},
+        {"label": "ECG V1", "steps": chest[:500], "fs_hz": 250},
+        {"label": "ECG II", "steps": two, "unit": "mV", "physical": (5, -4), "digital": (1 - half, half - 1)},
+    ]
+    return made.edf_file(folder / "a.edf", signals, record_s=0.1, **kind)
+
+
+def _edf_gaps(folder: Path) -> Path:
+    return _edf(
+        folder, kind="+D", starts_s=[0.25 + 0.1 * k + 0.3 * (k > 4) + 0.7 * (k > 11) for k in range(20)]
+    )
+
+
+def _ishne(folder: Path) -> Path:
+    d = made.digits(3, N, 16)
+    d[1, 3:9] = -32768
+    return made.ishne_file(folder / "a.ecg", d, codes=[5, 6, 11], nv=[1000, 2500, 40_000], note=b"free text")
+
+
+def _aecg(folder: Path) -> Path:
+    one = made.aecg_set(made.digits(2, 500, 12, seed=1), ["I", "II"], origin='value="0.03" unit="mV"')
+    two = made.aecg_set(
+        made.digits(2, 400, 20, seed=2),
+        ["aVR", "V1"],
+        head='<head value="20200102030406.250"/>',
+        scale='value="-0.005" unit="mV"',
+    )
+    return made.aecg_file(folder / "a.xml", [one, two])
+
+
 MAKERS = {
     f"wfdb-{fmt}": _fixed_width(fmt, bits) for fmt, bits in ((16, 16), (212, 12), (24, 24), (32, 32), (80, 8))
 }
@@ -87,6 +125,9 @@ MAKERS |= {
 }
 MAKERS |= {"wfdb-mat": _mat, "wfdb-segments": _segments, "wfdb-layout": _layout, "wfdb-skew": _skewed}
 MAKERS |= {"wfdb-rates": _rates, "dicom": _dicom, "dicom-groups": _dicom_groups, "csv": _csv}
+MAKERS |= {"edf": _edf, "edf+c": partial(_edf, kind="+C"), "edf+d": _edf_gaps, "ishne": _ishne, "aecg": _aecg}
+MAKERS |= {"bdf": partial(_edf, bits=24), "bdf+c": partial(_edf, bits=24, kind="+C")}
+FORMATS = ("WFDB", "DICOM", "CSV", "EDF", "EDF+C", "EDF+D", "BDF", "BDF+C", "ISHNE", "aECG")
 
 
 @pytest.fixture(params=MAKERS)
@@ -143,7 +184,7 @@ def test_rails_hold_all_samples_and_steps_are_positive(opened: OpenRecording):
 def test_metadata_is_kept_and_identity_is_not(opened: OpenRecording):
     info = opened.info
     assert info.fs_hz == 500.0
-    assert info.format in ("WFDB", "DICOM", "CSV")
+    assert info.format in FORMATS
     assert info.name == Path(str(info.path)).stem
     assert info.sha256 is not None and len(info.sha256) == 64
     assert info.identity == ()

@@ -76,3 +76,26 @@ def test_segments_count_with_their_record(tmp_path: Path):
 def test_folders_that_link_in_a_circle(record: Path, tmp_path: Path):
     (tmp_path / "loop").symlink_to(tmp_path)
     assert find_recordings(tmp_path) == [record]
+
+
+def test_every_format_is_found_by_content(tmp_path: Path):
+    d = made.digits(2, 1000, 12)
+    leads = [{"label": "ECG I", "steps": d[0]}, {"label": "ECG II", "steps": d[1]}]
+    written = [
+        made.edf_file(tmp_path / "a", leads),
+        made.edf_file(tmp_path / "b.txt", leads, bits=24),
+        made.ishne_file(tmp_path / "c.dat", d, codes=[5, 6]),
+        made.aecg_file(tmp_path / "d.csv", [made.aecg_set(d, ["I", "II"])]),
+    ]
+    (tmp_path / "page.xml").write_text("<html><body>no ECG</body></html>")
+    (tmp_path / "beats.ann").write_bytes(b"ANN  1.0" + bytes(600))
+    assert find_recordings(tmp_path) == written
+    assert [open_recording(path).info.format for path in written] == ["EDF", "BDF", "ISHNE", "aECG"]
+
+
+@pytest.mark.parametrize("name", ["x.edf", "x.BDF"])
+def test_a_broken_file_called_edf_is_reported_not_passed_over(name: str, tmp_path: Path):
+    (tmp_path / name).write_bytes(bytes(3000))
+    assert find_recordings(tmp_path) == [tmp_path / name]
+    with pytest.raises(ReadError, match="no known format"):
+        open_recording(tmp_path / name)
