@@ -18,9 +18,8 @@ from numpy.typing import NDArray
 
 from sigguard.errors import WriteError
 from sigguard.leads import clean_name
-from sigguard.readers.base import DigitalScale, OpenRecording
+from sigguard.readers.base import GAP_LIMIT, DigitalScale, OpenRecording
 from sigguard.readers.wfdb_header import SignalLine
-from sigguard.readers.wfdb_record import GAP_LIMIT
 from sigguard.readers.wfdb_stored import StoredWfdb
 from sigguard.recording import unique_names
 from sigguard.writers import wfdb_marks
