@@ -14,7 +14,10 @@ import typer
 
 from sigguard.cli.check import check
 from sigguard.cli.demo import demo
+from sigguard.cli.history import history
+from sigguard.cli.overrule import overrule
 from sigguard.cli.train import train
+from sigguard.cli.watch import watch
 from sigguard.errors import ProfileError, SigguardError, UsageError
 
 __all__ = ["app", "main"]
@@ -55,6 +58,9 @@ def _top(
 
 app.command()(check)
 app.command()(demo)
+app.command()(watch)
+app.command()(history)
+app.command()(overrule)
 app.command()(train)
 
 

@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import re
 import unicodedata
+from collections.abc import Iterable
 
 from sigguard.errors import UsageError
+from sigguard.readers.base import printable
 
 _MV_PER_UNIT = {"v": 1000.0, "mv": 1.0, "uv": 1e-3, "μv": 1e-3, "nv": 1e-6}
 _WORDS = {
@@ -26,6 +28,12 @@ _OTHER = re.compile(
     re.IGNORECASE,
 )
 _EEG = re.compile(r"^(fp?[12z]|[cfopt][34z]|o[12]|t[3-6]|f[78])[-:](a[12]|m[12]|ref|cz)$", re.IGNORECASE)
+
+_DEVICE = re.compile(
+    r"(ecg )?(device|recorder|cart|electrocardiograph)( (name|model|type))?|manufacturer( ?model ?name)?|model",
+    re.IGNORECASE,
+)
+MAX_DEVICE = 80  # characters
 
 
 def mv_per_unit(unit: str) -> float | None:
@@ -50,3 +58,16 @@ def is_ecg(name: str, unit: str | None) -> bool:
         return False
     bare = name.strip()
     return not (_OTHER.match(bare) or _EEG.match(bare))
+
+
+def device_stated(pairs: Iterable[tuple[str, str]]) -> str | None:
+    """The recorder among pairs of a header (``Device``, ``Recorder``, ``Model`` …: text), None if not stated.
+
+    Only what is called so in as many words: free notes may hold names of people.
+    """
+    found = [
+        " ".join(printable(text).split())[:MAX_DEVICE]
+        for key, text in pairs
+        if _DEVICE.fullmatch(key.strip())
+    ]
+    return " ".join(dict.fromkeys(filter(None, found)))[:MAX_DEVICE] or None
