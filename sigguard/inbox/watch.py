@@ -101,6 +101,9 @@ class Watcher:
         self.settling = Settling(settings.settle_s, settings.patience_s)
         self.tally = Tally()
         self._done: dict[str, set[str]] = {}
+        self._sums: dict[
+            str, tuple[str, str]
+        ] = {}  # signature and checksum of what another process has in hand
         self._failing: dict[str, tuple[str, float]] = {}
         self._route_next = 0.0
         self._alerts: AlertSender | None = None
@@ -141,6 +144,7 @@ class Watcher:
             begun = time.monotonic()
             try:
                 arrivals = self.inbox.look()
+                look_s = time.monotonic() - begun
             except OSError as err:  # a share that is away for a while
                 self.complain(f"{self.settings.folder}: cannot be read now ({err.strerror or err})")
                 stop.wait(10 * self.settings.every_s)
@@ -148,9 +152,7 @@ class Watcher:
             self._round(ledger, arrivals, stop)
             if once:
                 return
-            stop.wait(
-                max(self.settings.every_s, 3 * (time.monotonic() - begun) if not self.tally.left else 0)
-            )
+            stop.wait(max(self.settings.every_s, 3 * look_s))  # a large inbox is not looked at all the time
 
     def _round(self, ledger: Ledger, arrivals: list[Arrival], stop: StopRequest) -> None:
         """Everything that is ready, once; for the others note what they wait for."""
@@ -177,7 +179,9 @@ class Watcher:
         """Claim, check and enter one arrival; why it could not be done now, None if there is no more to do."""
         failure = None
         try:
-            sha256 = _content_of(arrival)
+            known, sha256 = self._sums.pop(arrival.name, ("", ""))
+            if known != arrival.signature:
+                sha256 = _content_of(arrival)
         except OSError as err:  # it went away, or nobody may read it
             failure = f"cannot be read ({err.strerror or err})"
             if not self._given_up(arrival):
@@ -194,6 +198,8 @@ class Watcher:
         )
         if claim == "done":
             self._done.setdefault(arrival.name, set()).add(arrival.signature)
+        if claim == "held":
+            self._sums[arrival.name] = arrival.signature, sha256
         if isinstance(claim, str):
             return "in the hands of another process" if claim == "held" else None
         readable = failure is None and arrival.refused is None

@@ -27,8 +27,8 @@ def main() -> None:
             kills=kills,
             seed=11,
             pause_s=0.015,
-            sleep_s=0.02,
-            between_s=(2.0, 6.0),
+            sleep_s=0.05,
+            between_s=(0.5, 3.0),
             stand_in=not real,
         )
     repeated = found.in_hand

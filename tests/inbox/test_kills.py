@@ -14,7 +14,7 @@ pytestmark = pytest.mark.skipif(os.name == "nt", reason="signals of POSIX")
 
 
 def test_kills_lose_nothing_and_repeat_at_most_the_one_in_hand(tmp_path):
-    found = torture(tmp_path, n=60, kills=4, seed=3, pause_s=0.03, sleep_s=0.05, between_s=(1.5, 3.0))
+    found = torture(tmp_path, n=60, kills=4, seed=3, pause_s=0.03, sleep_s=0.1, between_s=(0.5, 1.5))
     assert_nothing_lost(found, n=60, kills=4)
     assert sum(found.begun.values()) >= 60
 

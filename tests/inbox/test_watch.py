@@ -15,6 +15,7 @@ import quick_screening
 from dropped import ROOT, drop, environment, record_files, start, wait_for
 
 from sigguard.inbox import route, watch
+from sigguard.inbox.arrivals import Inbox
 from sigguard.inbox.ledger import Ledger
 from sigguard.report.document import load_schema
 
@@ -247,3 +248,23 @@ def test_unfinished_files_of_a_killed_writer_are_taken_away(tmp_path):
     (tmp_path / "report.json").write_text("{}")
     route.remove_unfinished(tmp_path)
     assert [p.name for p in tmp_path.iterdir()] == ["report.json"]
+
+
+def test_what_another_has_in_hand_is_read_once_and_taken_when_it_is_free(station, monkeypatch):
+    path = drop(station.inbox, "accept-a")
+    sha256 = watch.sha256_of([path, path.with_suffix(".dat")])
+    (arrival,) = Inbox(station.inbox).look()
+    settings = watch.WatchSettings(folder=station.inbox, out_dir=station.root / "out", ledger=station.ledger)
+    watcher = watch.Watcher(settings, tell=station.lines.append, complain=station.said.append)
+    reads, real = [], watch.sha256_of
+    monkeypatch.setattr(watch, "sha256_of", lambda parts: reads.append(parts) or real(parts))
+    with Ledger(station.ledger) as ledger:
+        ledger.claim(
+            "accept-a.hea", sha256, owner="elsewhere|1||x", signature="", n_bytes=1, out_dir=station.root
+        )
+        for _ in range(5):
+            assert "another process" in watcher._one(ledger, arrival)
+        assert len(reads) == 1 and station.lines == []
+        ledger.renew("elsewhere|1||x", lease_s=-1.0)
+        assert watcher._one(ledger, arrival) is None
+    assert len(station.lines) == 1
