@@ -7,9 +7,11 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 import pytest
-import quick_screening
 
-from sigguard.inbox.watch import StopRequest, Watcher, WatchSettings
+pytest.register_assert_rewrite("torture")
+import quick_screening  # noqa: E402
+
+from sigguard.inbox.watch import StopRequest, Watcher, WatchSettings  # noqa: E402
 
 
 @dataclass
