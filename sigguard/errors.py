@@ -6,6 +6,7 @@ SigguardError
 ├── UsageError         an option or argument that makes no sense
 ├── ProfileError       an acceptance profile that cannot be used
 ├── ModelError         the trained model is missing, damaged or does not answer its probes
+├── LedgerError        a ledger that cannot be opened or does not hold what is asked for
 └── WriteError         an output could not be written whole
 """
 
@@ -51,6 +52,10 @@ class ProfileError(SigguardError):
 
 class ModelError(SigguardError):
     """The trained model is missing, damaged, or does not give its stored answers."""
+
+
+class LedgerError(SigguardError):
+    """A ledger of watched recordings that cannot be opened, or holds no such recording."""
 
 
 class WriteError(SigguardError):

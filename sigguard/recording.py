@@ -37,6 +37,7 @@ class RecordingInfo:
     band_hz: NDArray[np.float64] | None = None  # (n_leads, 2): recorded high-pass and low-pass corner
     assumed: tuple[str, ...] = ()  # what a reader had to take for granted, in plain words
     left_out: tuple[str, ...] = ()  # signals that are not ECG, by name
+    device: str | None = None  # make and model of the recorder as the header states them
     identity: tuple[tuple[str, str], ...] = ()  # kept in memory only; leaves only with --with-identity
 
     @property

@@ -15,8 +15,11 @@ import typer
 from sigguard.cli.check import check
 from sigguard.cli.compare import compare
 from sigguard.cli.demo import demo
+from sigguard.cli.history import history
+from sigguard.cli.overrule import overrule
 from sigguard.cli.train import train
 from sigguard.cli.trim import trim
+from sigguard.cli.watch import watch
 from sigguard.errors import ProfileError, SigguardError, UsageError
 
 __all__ = ["app", "main"]
@@ -59,6 +62,9 @@ app.command()(check)
 app.command()(trim)
 app.command()(compare)
 app.command()(demo)
+app.command()(watch)
+app.command()(history)
+app.command()(overrule)
 app.command()(train)
 
 

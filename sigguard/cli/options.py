@@ -65,13 +65,13 @@ def check_paths(paths: Sequence[Path]) -> list[Path]:
     return list(paths)
 
 
-def check_out(out_dir: Path) -> Path:
-    """The folder for the reports, made if it is not there."""
+def check_out(out_dir: Path, option: str = "--out") -> Path:
+    """A folder to write to, made if it is not there."""
     try:
         out_dir.mkdir(parents=True, exist_ok=True)
     except OSError as err:
         raise UsageError(
-            f"--out {out_dir}: expected a folder that can be written to, found: {err.strerror}"
+            f"{option} {out_dir}: expected a folder that can be written to, found: {err.strerror}"
         ) from err
     return out_dir
 
@@ -80,3 +80,18 @@ def check_folder(option: str, folder: Path | None) -> Path | None:
     if folder is not None and not folder.is_dir():
         raise UsageError(f"{option} {folder}: no such folder")
     return folder
+
+
+def check_inbox(folder: Path, *outputs: Path | None) -> Path:
+    """The folder to watch, if it is there and not what is written to as well."""
+    if not folder.is_dir():
+        raise UsageError(f"{folder}: expected a folder to watch, found no such folder")
+    if folder.resolve() in [place.resolve() for place in outputs if place is not None]:
+        raise UsageError(f"{folder}: reports and copies need another folder than the inbox itself")
+    return folder
+
+
+def check_seconds(option: str, seconds: float, *, least_s: float) -> float:
+    if not (isfinite(seconds) and seconds >= least_s):
+        raise UsageError(f"{option} takes {least_s:g} seconds or more, found {seconds:g}")
+    return seconds

@@ -30,7 +30,7 @@ from sigguard.readers.csv_layout import (
     is_number,
     split,
 )
-from sigguard.readers.signals import given_unit, is_ecg, mv_per_unit
+from sigguard.readers.signals import device_stated, given_unit, is_ecg, mv_per_unit
 from sigguard.recording import MAX_LEADS, RecordingInfo
 
 MISSING_CODES = (-32768.0, 9999.0, -9999.0)
@@ -106,6 +106,7 @@ def open_csv(path: Path, options: ReadOptions) -> OpenRecording:
         step_mv=_steps(signal),
         assumed=tuple(assumed),
         left_out=tuple(left_out),
+        device=device_stated(layout.preamble),
         identity=tuple((base.printable(k), base.printable(v)) for k, v in layout.preamble)
         if options.with_identity
         else (),

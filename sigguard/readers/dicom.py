@@ -21,7 +21,7 @@ from sigguard.leads import LEAD_OF_CODE, clean_name, normalise_leads
 from sigguard.readers import base
 from sigguard.readers.base import MAYBE, NO, YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
 from sigguard.readers.held import OpenHeld
-from sigguard.readers.signals import given_unit, is_ecg, mv_per_unit
+from sigguard.readers.signals import device_stated, given_unit, is_ecg, mv_per_unit
 from sigguard.recording import MAX_LEADS, RecordingInfo
 
 _WAVEFORM_CLASSES = b"1.2.840.10008.5.1.4.1.1.9."
@@ -184,6 +184,9 @@ def _opened(
         band_hz=band if np.isfinite(band).any() else None,
         assumed=tuple(dict.fromkeys(assumed)),
         left_out=tuple(left_out),
+        device=device_stated(
+            (key, str(data.get(key) or "")) for key in ("Manufacturer", "ManufacturerModelName")
+        ),
         identity=_identity(data) if options.with_identity else (),
     )
     return OpenHeld(info, channels, channels=numbers, n_signals=n_signals)

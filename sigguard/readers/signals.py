@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import re
 import unicodedata
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 
 from sigguard.errors import UsageError
+from sigguard.readers.base import printable
 
 _MV_PER_UNIT = {"v": 1000.0, "mv": 1.0, "uv": 1e-3, "μv": 1e-3, "nv": 1e-6}
 _WORDS = {
@@ -31,6 +32,12 @@ _EEG = re.compile(
     re.IGNORECASE,
 )
 _EEG_OR_CHEST = re.compile(r"^[ca][1-4]$", re.IGNORECASE)
+
+_DEVICE = re.compile(
+    r"(ecg )?(device|recorder|cart|electrocardiograph)( (name|model|type))?|manufacturer( ?model ?name)?|model",
+    re.IGNORECASE,
+)
+MAX_DEVICE = 80  # characters
 
 
 def mv_per_unit(unit: str) -> float | None:
@@ -62,3 +69,16 @@ def is_scalp_beside(name: str, names: Sequence[str]) -> bool:
     return bool(_EEG_OR_CHEST.match(name.strip())) and any(
         _EEG.match(other.strip()) or other.casefold().startswith("eeg") for other in names
     )
+
+
+def device_stated(pairs: Iterable[tuple[str, str]]) -> str | None:
+    """The recorder among pairs of a header (``Device``, ``Recorder``, ``Model`` …: text), None if not stated.
+
+    Only what is called so in as many words: free notes may hold names of people.
+    """
+    found = [
+        " ".join(printable(text).split())[:MAX_DEVICE]
+        for key, text in pairs
+        if _DEVICE.fullmatch(key.strip())
+    ]
+    return " ".join(dict.fromkeys(filter(None, found)))[:MAX_DEVICE] or None

@@ -19,7 +19,7 @@ from sigguard.errors import NoECGLead, ReadError
 from sigguard.leads import clean_name, normalise_leads
 from sigguard.readers import base
 from sigguard.readers.base import MAYBE, NO, YES, DigitalScale, OpenRecording, Reader, ReadOptions, read_error
-from sigguard.readers.signals import given_unit, is_ecg, mv_per_unit
+from sigguard.readers.signals import device_stated, given_unit, is_ecg, mv_per_unit
 from sigguard.readers.wfdb_files import SegmentFiles, inside_folder, without_samples
 from sigguard.readers.wfdb_header import (
     DEFAULT_FS_HZ,
@@ -215,6 +215,7 @@ def _assemble(
         step_mv=np.array([abs(s.step_mv) for s in steps]),
         assumed=tuple(assumed),
         left_out=tuple(left_out),
+        device=device_stated((key, text) for key, _, text in (n.partition(":") for n in header.notes)),
         identity=tuple(("note", base.printable(note)) for note in header.notes)
         if options.with_identity
         else (),

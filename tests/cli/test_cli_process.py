@@ -49,7 +49,7 @@ def test_help_imports_nothing_heavy():
         [sys.executable, "-c", code], env=env, capture_output=True, text=True, timeout=60, check=True
     )
     assert done.stdout.splitlines()[-1] == "[]"
-    for command in ("check", "demo", "train"):
+    for command in ("check", "trim", "compare", "watch", "history", "overrule", "demo", "train"):
         assert command in done.stdout
 
 
@@ -64,7 +64,7 @@ def test_help_is_there_at_once():
     assert min(took) < 0.4
 
 
-@pytest.mark.parametrize("command", ["check", "demo", "train"])
+@pytest.mark.parametrize("command", ["check", "trim", "compare", "watch", "history", "overrule", "demo", "train"])
 def test_help_of_each_command(environment, command):
     code, out, err = run(command, "--help", env=environment)
     assert code == 0 and err == [] and out[0].startswith(f"Usage: sigguard {command}")
