@@ -64,7 +64,9 @@ def test_help_is_there_at_once():
     assert min(took) < 0.4
 
 
-@pytest.mark.parametrize("command", ["check", "trim", "compare", "watch", "history", "overrule", "demo", "train"])
+@pytest.mark.parametrize(
+    "command", ["check", "trim", "compare", "watch", "history", "overrule", "demo", "train"]
+)
 def test_help_of_each_command(environment, command):
     code, out, err = run(command, "--help", env=environment)
     assert code == 0 and err == [] and out[0].startswith(f"Usage: sigguard {command}")
