@@ -20,6 +20,7 @@ def run(folder: Path) -> dict[str, Report]:
     return {name: check(folder / f"{name}.hea", profile="resting") for name in names}
 
 
+@pytest.mark.usefixtures("no_advice")
 def test_clean_recordings_pass(open_data: Path) -> None:
     reports = run(open_data / "ludb")
     if not reports:

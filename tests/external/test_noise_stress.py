@@ -27,6 +27,7 @@ def shares_below_intervals(path: Path) -> tuple[float, float]:
     return float(below[unseen].mean()), float(below[~noisy].mean())
 
 
+@pytest.mark.usefixtures("no_advice")
 def test_noise_stress_records(open_data: Path) -> None:
     folder = open_data / "nstdb"
     if not (folder / "118e00.hea").is_file():
