@@ -11,6 +11,7 @@ import signal
 import subprocess
 import sys
 import time
+from contextlib import suppress
 from pathlib import Path
 
 import numpy as np
@@ -251,9 +252,11 @@ def test_killed_at_any_time_nothing_half_is_there(tmp_path: Path) -> None:
             out = tmp_path / f"killed-{k}"
             print(gaps, out, file=parent.stdin, flush=True)
             said = lines_until(parent.stdout, "encode")  # it has begun to write
-            time.sleep(rng.uniform(0.0, 0.45))
-            child = next((int(line) for line in said if line.isdigit()), 0) or int(parent.stdout.readline())
-            os.kill(child, signal.SIGKILL)
+            time.sleep(rng.uniform(0.0, 0.35))
+            while not any(line.isdigit() for line in said):
+                said.append(parent.stdout.readline().strip())
+            with suppress(ProcessLookupError):  # done before it could be killed
+                os.kill(next(int(line) for line in said if line.isdigit()), signal.SIGKILL)
             lines_until(parent.stdout, "ended")
             there = checksums(out)
             cut_short += there != whole[gaps]
