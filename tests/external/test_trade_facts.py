@@ -94,7 +94,8 @@ def test_muscle_takes_p_before_qrs_and_the_rate_last():
 
 def test_movement_takes_all_small_waves_before_the_qrs():
     score = judged("motion", 0.2)[0].mean(axis=0)
-    assert score[QRS] == score.max() and score[[PR, QT, ST]].max() < 0.4
+    # More often lost than kept, while the QRS complex is more often kept than lost.
+    assert score[QRS] == score.max() and score[[PR, QT, ST]].max() < 0.5 < score[QRS]
 
 
 def test_mains_of_a_tenth_of_a_millivolt_takes_next_to_nothing():
