@@ -10,13 +10,12 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cache
-from io import BytesIO
 
 import numpy as np
 from numpy.typing import NDArray
 
-from sigguard.errors import ModelError, UsageError
-from sigguard.resources import resource_path
+from sigguard.errors import ModelError
+from sigguard.resources import model_arrays
 from sigguard.trees import TreeArrays, TreeEnsemble
 
 FILE = "beats.npz"
@@ -164,14 +163,7 @@ def _rhythm(seen: Seen, n_rows: int) -> tuple[NDArray[np.float64], NDArray[np.fl
 @cache
 def shipped_judge() -> TreeEnsemble:
     """The ensemble that ships. ModelError where it is missing, damaged or of another feature table."""
-    try:
-        raw = resource_path("models", FILE).read_bytes()
-        with np.load(BytesIO(raw), allow_pickle=False) as archive:
-            arrays = {key: archive[key] for key in archive.files}
-    except (UsageError, OSError, ValueError) as err:
-        raise ModelError(
-            f"{FILE}: the beat model cannot be read; the installation may be incomplete"
-        ) from err
+    arrays = model_arrays(FILE, "beat model")
     names = tuple(str(n) for n in arrays.get("feature_names", ()))
     if names != CANDIDATE_FEATURES:
         raise ModelError(f"{FILE}: trained on another table of candidates; train it again")

@@ -15,14 +15,13 @@ from __future__ import annotations
 
 from dataclasses import dataclass, fields
 from functools import cache, lru_cache
-from io import BytesIO
 
 import numpy as np
 from numpy.typing import NDArray
 
 from sigguard.electrodes import ELECTRODES
-from sigguard.errors import ModelError, UsageError
-from sigguard.resources import resource_path
+from sigguard.errors import ModelError
+from sigguard.resources import model_arrays
 from sigguard.waves import FS, LENGTH, ZERO
 
 Floats = NDArray[np.float64]
@@ -320,12 +319,5 @@ class PlacementModel:
 @cache
 def shipped_placement_model() -> PlacementModel:
     """The model that ships. ModelError where it is missing or damaged."""
-    try:
-        raw = resource_path("models", FILE).read_bytes()
-        with np.load(BytesIO(raw), allow_pickle=False) as archive:
-            arrays = {key: archive[key] for key in archive.files}
-    except (UsageError, OSError, ValueError) as err:
-        raise ModelError(
-            f"{FILE}: the placement model cannot be read; the installation may be incomplete"
-        ) from err
+    arrays = model_arrays(FILE, "placement model")
     return PlacementModel.from_arrays(arrays)

@@ -2,9 +2,13 @@
 
 from __future__ import annotations
 
+from io import BytesIO
 from pathlib import Path
 
-from sigguard.errors import UsageError
+import numpy as np
+from numpy.typing import NDArray
+
+from sigguard.errors import ModelError, UsageError
 
 KINDS = ("models", "synthetic")
 _PACKAGE = Path(__file__).resolve().parent
@@ -24,3 +28,13 @@ def resource_path(kind: str, name: str) -> Path:
         if path.exists() and path.resolve().is_relative_to(folder.resolve()):
             return path
     raise UsageError(f"shipped file {kind}/{name} not found; the installation may be incomplete")
+
+
+def model_arrays(file: str, what: str) -> dict[str, NDArray]:
+    """The plain arrays of a shipped model file; ModelError where it is missing or damaged."""
+    try:
+        raw = resource_path("models", file).read_bytes()
+        with np.load(BytesIO(raw), allow_pickle=False) as archive:
+            return {key: archive[key] for key in archive.files}
+    except (UsageError, OSError, ValueError) as err:
+        raise ModelError(f"{file}: the {what} cannot be read; the installation may be incomplete") from err
